@@ -1,0 +1,1 @@
+"""The assessment file: schema, loading, simulations, check."""

@@ -1,0 +1,330 @@
+"""The assessment file: everything a run depends on, as pydantic models.
+
+The reference of every key, with defaults, is docs/assessment-file.md.
+"""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validator
+
+from stook.season.definition import SEASON, IndexDefinition, Variable
+
+_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9.-]*")
+
+
+def _plain_name(name: str) -> str:
+    if not _NAME.fullmatch(name):
+        raise ValueError(f"name {name!r} may hold letters, digits, '-' and '.' only")
+    return name
+
+
+def _ordered_years(years: tuple[int, int]) -> tuple[int, int]:
+    if years[1] < years[0]:
+        raise ValueError(f"years {years[0]} to {years[1]} run backwards")
+    return years
+
+
+Name = Annotated[str, AfterValidator(_plain_name)]
+Years = Annotated[tuple[int, int], AfterValidator(_ordered_years)]
+
+
+class Section(BaseModel):
+    """A mapping of the file: unknown keys are refused, values do not change."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class Axis(Section):
+    """Pixel centres from first to last, evenly spaced, degrees."""
+
+    first: float
+    last: float
+    step: float = Field(gt=0)
+
+    @model_validator(mode="after")
+    def _whole_steps(self) -> Axis:
+        steps = (self.last - self.first) / self.step
+        if self.last < self.first or abs(steps - round(steps)) > 1e-6:
+            raise ValueError("last must lie a whole number of steps above first")
+        return self
+
+
+class Grid(Section):
+    """The analysis grid: axes, or the grid of a file."""
+
+    lat: Axis | None = None
+    lon: Axis | None = None
+    like: Path | None = Field(None, description="NetCDF file whose latitude and longitude to use")
+    tiles: int = Field(
+        1, ge=1, le=1000, description="bands of rows the heavy stages are split into"
+    )
+
+    @model_validator(mode="after")
+    def _one_way(self) -> Grid:
+        if (self.like is None) == (self.lat is None or self.lon is None):
+            raise ValueError("give either lat and lon, or like")
+        return self
+
+
+class Periods(Section):
+    """Calendar windows, first and last year included."""
+
+    baseline: Years
+    horizons: dict[Name, Years] = Field(default_factory=dict)
+    span: Years | None = Field(None, description="years to compute; default: all in the files")
+
+
+Files = dict[Variable, list[str]]
+"""Per variable, the files or file patterns (``*``, ``?``) of one series."""
+
+
+class Reference(Section):
+    """The reference data the correction is calibrated on, and the pseudo-simulation observed."""
+
+    name: str
+    files: Files = Field(min_length=1)
+
+
+class Run(Section):
+    """One simulation with explicit files, historical and scenario part together."""
+
+    model: Name
+    scenario: Name
+    realisation: Name
+    files: Files = Field(min_length=1)
+
+
+class Simulations(Section):
+    """The ensemble: a file pattern with named fields, or explicit runs.
+
+    The pattern holds ``{variable}``, ``{model}``, ``{scenario}``, ``{realisation}``; other parts may use ``*``.
+    """
+
+    pattern: str | None = None
+    historical: Name | None = Field(
+        None, description="scenario name of the historical part, joined before every scenario"
+    )
+    models: list[Name] | None = Field(None, description="keep these models only")
+    scenarios: list[Name] | None = Field(None, description="keep these scenarios only")
+    runs: list[Run] = Field(default_factory=list)
+
+    @model_validator(mode="after")
+    def _one_way(self) -> Simulations:
+        if self.pattern is not None:
+            fields = ("{variable}", "{model}", "{scenario}", "{realisation}")
+            if missing := [field for field in fields if field not in self.pattern]:
+                raise ValueError(f"pattern lacks {', '.join(missing)}")
+        if self.pattern is not None and self.runs:
+            raise ValueError("give either pattern or runs")
+        return self
+
+
+Method = Literal["quantile-delta", "quantile", "mean", "none"]
+
+
+class VariableCorrection(Section):
+    """Choices of the correction of one variable; those left out come from `correct.all`."""
+
+    method: Method = "quantile-delta"
+    kind: Literal["additive", "ratio"] | None = Field(
+        None, description="default: ratio for pr, additive otherwise"
+    )
+    window_days: int = Field(31, ge=1, le=365)
+    step_days: int = Field(5, ge=1, le=31)
+    cdf_years: int = Field(30, ge=5, description="years of the moving CDF of quantile-delta")
+    cdf_step_years: int = Field(10, ge=1)
+    nodes: int | Literal["all"] = Field("all", description="quantiles kept of each calibration CDF")
+    ratio_cap: float = Field(10.0, gt=1)
+    trace: float = Field(0.05, gt=0, description="pr: below this a day is dry, mm/day")
+    minimum_values: int = Field(100, ge=10, description="values a window needs")
+
+
+class Correct(Section):
+    """The correct stage."""
+
+    calibration: Years | None = Field(None, description="default: the baseline")
+    temperature_pair: Literal["mean-and-range", "separate"] = "mean-and-range"
+    all: VariableCorrection = VariableCorrection()
+    variables: dict[Variable, dict[str, Any]] = Field(default_factory=dict)
+
+    @model_validator(mode="after")
+    def _valid_overrides(self) -> Correct:
+        for variable in self.variables:
+            self.choice(variable)
+        return self
+
+    def choice(self, variable: str) -> VariableCorrection:
+        """Return the choices for one variable, its own over those for all."""
+        own = self.variables.get(variable, {})  # type: ignore[call-overload]
+        merged = VariableCorrection.model_validate(self.all.model_dump() | own)
+        if merged.kind is None:
+            kind = "ratio" if variable == "pr" else "additive"
+            merged = merged.model_copy(update={"kind": kind})
+        return merged
+
+
+class Layer(Section):
+    """A grid of one crop property: a variable of a NetCDF file, a GeoTIFF band, or one number."""
+
+    file: Path | None = None
+    variable: str | None = Field(None, description="NetCDF variable; needed if there are several")
+    band: int = Field(1, ge=1, description="GeoTIFF band")
+    value: float | None = Field(None, description="the same number everywhere")
+    unit: str | None = Field(None, description="overrides, or stands in for, the unit in the file")
+
+    @model_validator(mode="before")
+    @classmethod
+    def _short_form(cls, given: Any) -> Any:
+        if isinstance(given, bool):
+            return given
+        if isinstance(given, int | float):
+            return {"value": given}
+        if isinstance(given, str):
+            return {"file": given}
+        return given
+
+    @model_validator(mode="after")
+    def _one_way(self) -> Layer:
+        if (self.file is None) == (self.value is None):
+            raise ValueError("give either file or value")
+        return self
+
+
+class CropCalendar(Section):
+    """Planting and maturity as day of year (1 to 365); maturity before planting: next year."""
+
+    planting: Layer
+    maturity: Layer
+
+
+class WaterSystem(Section):
+    """One crop under one water supply (rainfed, irrigated, or the team's own name)."""
+
+    area: Layer = Field(description="harvested area: ha, km2 or a fraction of the cell")
+    calendar: CropCalendar
+    phases: dict[Name, tuple[float, float]] = Field(
+        default_factory=dict, description="growth phases as fractions of the season, 0 to 1"
+    )
+    baseline_yield: Layer = Field(description="t/ha or a convertible unit")
+    response: Path
+    indices: dict[str, IndexDefinition] = Field(
+        default_factory=dict, description="indices wanted besides those of the response"
+    )
+
+    @model_validator(mode="after")
+    def _valid_phases(self) -> WaterSystem:
+        for name, (start, end) in self.phases.items():
+            if name == SEASON:
+                raise ValueError("phase name 'season' is the whole season already")
+            if not 0 <= start < end <= 1:
+                raise ValueError(f"phase {name}: needs 0 <= start < end <= 1, got {start} to {end}")
+        return self
+
+
+class Crop(Section):
+    """One crop with its water systems."""
+
+    systems: dict[Name, WaterSystem] = Field(min_length=1)
+
+    @model_validator(mode="after")
+    def _reserved(self) -> Crop:
+        if "all" in self.systems:
+            raise ValueError("system name 'all' is the combination of the systems")
+        return self
+
+
+class Regions(Section):
+    """The region polygons."""
+
+    file: Path
+    layer: str | None = None
+    name: str = Field("name", description="attribute that holds the region's name")
+    only: list[str] | None = Field(None, description="keep these regions of the file only")
+
+
+class Ensemble(Section):
+    """The ensemble stage."""
+
+    draws: int = Field(200, ge=0, le=10000, description="draws of the response coefficients")
+    weights: dict[Name, float] | None = Field(None, description="model weights; default: equal")
+
+
+class Trend(Section):
+    """The trend stage."""
+
+    periods: dict[Name, Years] = Field(
+        default_factory=dict, description="default: the whole of each simulation"
+    )
+    method: Literal["ar1", "shuffle"] = Field(
+        "ar1", description="test that headlines are drawn from"
+    )
+    randomisations: int = Field(999, ge=99, le=100000)
+    level: float = Field(0.05, gt=0, lt=0.5)
+    minimum_years: int = Field(20, ge=10)
+
+
+class Store(Section):
+    """How grids are written."""
+
+    daily_codec: Literal["zstd", "zlib"] = Field(
+        "zstd", description="codec of daily grids; zlib opens in programs without a filter plugin"
+    )
+    block_mb: int = Field(64, ge=1, description="size of the chunks a job works on")
+
+
+class Assessment(Section):
+    """A whole assessment, validated. `folder` is where its file lies; paths are relative to it."""
+
+    title: str
+    name: Name
+    seed: int = Field(ge=0)
+    results: Path = Path("results")
+    grid: Grid
+    periods: Periods
+    reference: Reference | None = None
+    simulations: Simulations = Simulations()
+    correct: Correct = Correct()
+    crops: dict[Name, Crop] = Field(min_length=1)
+    regions: Regions
+    ensemble: Ensemble = Ensemble()
+    trend: Trend = Trend()
+    store: Store = Store()
+    subset: list[str] = Field(
+        default_factory=list, description="set by --region: compute these regions only"
+    )
+    source: Path = Field(Path("assessment.yaml"), description="set on loading: the file itself")
+
+    @model_validator(mode="after")
+    def _possible(self) -> Assessment:
+        choices = [
+            self.correct.choice(name) for name in ("tas", "tasmin", "tasmax", "pr", "rsds", "hurs")
+        ]
+        if self.reference is None and any(choice.method != "none" for choice in choices):
+            raise ValueError(
+                "reference is required, unless correct.all.method is none for every variable"
+            )
+        if self.reference is None and not (self.simulations.pattern or self.simulations.runs):
+            raise ValueError("give simulations, a reference, or both")
+        return self
+
+    @property
+    def folder(self) -> Path:
+        """Folder of the assessment file."""
+        return self.source.parent
+
+    def path(self, given: Path | str) -> Path:
+        """Return a path of the file as an absolute path."""
+        return (self.folder / given).resolve()
+
+    @property
+    def systems(self) -> list[tuple[str, str]]:
+        """All (crop, system) pairs in the order of the file."""
+        return [(crop, system) for crop, spec in self.crops.items() for system in spec.systems]
+
+    def system(self, crop: str, system: str) -> WaterSystem:
+        """Return one crop x water system."""
+        return self.crops[crop].systems[system]

@@ -1,0 +1,1 @@
+"""Audit: ledger, verify and the independent plain path."""

@@ -1,0 +1,1 @@
+"""The plain path: each stage for one pixel, for reading; no code shared with the kernels."""

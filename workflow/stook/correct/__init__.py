@@ -1,0 +1,1 @@
+"""Correct: bias correction by quantile mapping."""

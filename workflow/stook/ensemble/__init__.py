@@ -1,0 +1,1 @@
+"""Ensemble: many members, one statement."""

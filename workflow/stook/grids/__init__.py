@@ -1,0 +1,1 @@
+"""Grids: CF files, units, calendars, cells, regridding, overlay."""

@@ -1,0 +1,62 @@
+"""The entry of every job: ``python -m stook.job STAGE NAME --results FOLDER key=value ...``.
+
+It calls the function NAME of ``stook.<stage>.job`` with the assessment of the results folder and
+the wildcards. A rule called ``correct_tile`` is thus ``stook.correct.job.tile``. The command is
+printed in every log, so that one job can be repeated by hand.
+"""
+
+from __future__ import annotations
+
+import argparse
+import importlib
+import os
+import sys
+import threading
+import time
+
+from stook.assessment.load import load_resolved
+from stook.errors import StookError
+
+
+def main(arguments: list[str] | None = None) -> int:
+    """Run one job; return its exit status."""
+    parser = argparse.ArgumentParser(prog="python -m stook.job", description=__doc__)
+    parser.add_argument("stage")
+    parser.add_argument("name")
+    parser.add_argument("--results", required=True, help="results folder of the assessment")
+    parser.add_argument("--threads", type=int, default=1)
+    parser.add_argument("wildcards", nargs="*", help="key=value")
+    given = parser.parse_intermixed_args(arguments)
+    wildcards = dict(text.split("=", 1) for text in given.wildcards)
+    _end_with_parent()
+    try:
+        run_job(given.stage, given.name, given.results, wildcards, given.threads)
+    except StookError as error:
+        print(f"error: {error}", file=sys.stderr)
+        return 1
+    return 0
+
+
+def run_job(stage: str, name: str, results: str, wildcards: dict[str, str], threads: int) -> None:
+    """Call the function of a job with Dask limited to the given threads."""
+    import dask
+
+    function = getattr(importlib.import_module(f"stook.{stage}.job"), name)
+    with dask.config.set(scheduler="threads", num_workers=threads):
+        function(load_resolved(results), **wildcards)
+
+
+def _end_with_parent() -> None:
+    """End this process when the process that started it is gone, however it ended."""
+    parent = os.getppid()
+
+    def watch() -> None:
+        while os.getppid() == parent:
+            time.sleep(0.5)
+        os._exit(1)
+
+    threading.Thread(target=watch, daemon=True).start()
+
+
+if __name__ == "__main__":
+    sys.exit(main())

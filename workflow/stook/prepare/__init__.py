@@ -1,0 +1,1 @@
+"""Prepare: raw climate files and crop layers onto the analysis grid."""

@@ -1,0 +1,1 @@
+"""Regions: area-weighted totals by region and crop."""

@@ -1,0 +1,1 @@
+"""Report: what people read and audit."""

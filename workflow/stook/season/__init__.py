@@ -1,0 +1,1 @@
+"""Season: weather indices over the growing season and its phases."""

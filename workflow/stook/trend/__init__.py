@@ -1,0 +1,1 @@
+"""Trend: slopes against randomised trends."""

@@ -1,0 +1,3 @@
+"""The version of the program, written into every file it makes."""
+
+VERSION = "0.1.0"

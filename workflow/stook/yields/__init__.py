@@ -1,0 +1,1 @@
+"""Yields: empirical yield response, pixel by pixel."""
