@@ -9,6 +9,9 @@ from stook.assessment.load import RESOLVED_NAME, results_folder
 from stook.assessment.schema import Assessment
 from stook.constants import OBSERVED
 
+STAGES = ("prepare", "correct", "season", "yields", "regions", "ensemble", "trend", "report")
+"""The stages in their order; each has a folder of this name in the results."""
+
 
 @dataclass(frozen=True)
 class Layout:

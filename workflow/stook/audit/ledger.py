@@ -7,6 +7,7 @@ of reading, and per variable the count of missing values, minimum, mean and maxi
 from __future__ import annotations
 
 import datetime
+import glob
 import hashlib
 import json
 import time
@@ -21,12 +22,21 @@ import numpy as np
 import pandas as pd
 import xarray as xr
 
-from stook.assessment.layout import Layout
+from stook.assessment.layout import STAGES, Layout
 from stook.assessment.load import assessment_digest
 from stook.assessment.schema import Assessment
 from stook.errors import InputError, ResultsError
 from stook.grids.files import Codec, delayed_netcdf, temporary_name, write_table
 from stook.version import VERSION
+
+INPUTS_FOLDER = "inputs"
+"""Folder inside the ledger that remembers the digests of raw inputs by size and date."""
+
+LEDGER_COLUMNS = (
+    *("path", "rule", "size", "sha256", "seconds", "parents"),
+    *("variable", "missing", "minimum", "mean", "maximum"),
+)
+"""Columns of `ledger_table`."""
 
 _BLOCK = 1 << 22
 
@@ -145,6 +155,8 @@ class Job:
         """
         try:
             path.parent.mkdir(parents=True, exist_ok=True)
+            for left in path.parent.glob(f".{glob.escape(path.name)}.*.part"):
+                left.unlink(missing_ok=True)  # of a job that was killed
             temporary_name(path).touch()
         except OSError as error:
             raise ResultsError(f"{path.parent}: cannot be written ({error.strerror})") from None
@@ -172,11 +184,11 @@ class Job:
 
     def _parent_digest(self, parent: Path) -> str:
         """Return the digest of a parent: from its record, or of the raw file (remembered)."""
-        if parent.is_relative_to(self.root):
+        if parent.is_relative_to(self.root) and _relative(parent, self.root).parts[0] in STAGES:
             return str(read_record(self.root, parent)["sha256"])
         status = parent.stat()
         key = hashlib.blake2b(str(parent).encode(), digest_size=12).hexdigest()
-        memory = self.root / "ledger" / "inputs" / f"{key}.json"
+        memory = self.root / "ledger" / INPUTS_FOLDER / f"{key}.json"
         stamp = [status.st_size, status.st_mtime_ns]
         if memory.exists():
             known = json.loads(memory.read_text(encoding="utf-8"))
@@ -200,6 +212,40 @@ def read_record(root: Path, result: Path) -> dict[str, Any]:
         return json.loads(path.read_text(encoding="utf-8"))
     except FileNotFoundError:
         raise ResultsError(f"{result}: has no ledger record; delete it and run again") from None
+
+
+def ledger_table(root: Path) -> pd.DataFrame:
+    """Return the ledger of a results folder as a table, one row a file and variable.
+
+    Parameters
+    ----------
+    root
+        The results folder.
+
+    Returns
+    -------
+    DataFrame
+        path, rule, size (bytes), sha256, seconds, parents (joined by ``; ``), variable, missing
+        (count), minimum, mean, maximum (unit of the variable); sorted by path. A file without
+        numeric variables has one row in which the last five are empty.
+    """
+    rows: list[dict[str, Any]] = []
+    folder = root / "ledger"
+    for path in sorted(folder.rglob("*.json")):
+        if path.relative_to(folder).parts[0] == INPUTS_FOLDER:
+            continue
+        record = json.loads(path.read_text(encoding="utf-8"))
+        row = {key: record[key] for key in ("path", "rule", "size", "sha256", "seconds")}
+        row["parents"] = "; ".join(record["parents"])
+        variables = record["variables"] or {None: {}}
+        rows += [row | {"variable": name} | values for name, values in variables.items()]
+    return pd.DataFrame(rows, columns=list(LEDGER_COLUMNS))
+
+
+def forget(root: Path, result: Path) -> None:
+    """Delete a result file together with its record."""
+    record_path(root, result).unlink(missing_ok=True)
+    result.unlink(missing_ok=True)
 
 
 def _relative(path: Path, root: Path) -> Path:
