@@ -1,0 +1,168 @@
+"""Calendars: position in the year, time steps, and joining the files of a series.
+
+Native calendars are kept; no day is invented. Days of different calendars are matched by their
+position in the year, a fraction between 0 and 1.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Literal
+
+import cftime
+import numpy as np
+import xarray as xr
+
+from stook.errors import InputError
+
+TimeStep = Literal["daily", "monthly", "annual"]
+CALENDARS = {
+    "standard": "standard",
+    "gregorian": "standard",
+    "proleptic_gregorian": "proleptic_gregorian",
+    "julian": "julian",
+    "noleap": "noleap",
+    "no_leap": "noleap",
+    "365_day": "noleap",
+    "all_leap": "all_leap",
+    "366_day": "all_leap",
+    "360_day": "360_day",
+}
+"""Calendar names that are read (CF 1.13, section 4.4.1; ``no_leap`` is common) and what they mean."""
+
+
+def calendar_name(given: str, path: Path | str) -> str:
+    """Return the one name Stook uses for a calendar.
+
+    Raises
+    ------
+    InputError
+        If it is none of CF's calendars.
+    """
+    try:
+        return CALENDARS[given.lower()]
+    except KeyError:
+        raise InputError(
+            f"{path}: calendar {given!r} is not known; valid: {', '.join(CALENDARS)}"
+        ) from None
+
+
+def years_of(times: np.ndarray) -> np.ndarray:
+    """Return the year of each cftime date, int64, same shape."""
+    return np.array([time.year for time in times], dtype=np.int64)
+
+
+def year_lengths(years: np.ndarray, calendar: str) -> np.ndarray:
+    """Return the number of days of each year in a calendar, int64, same shape."""
+    unique, inverse = np.unique(np.asarray(years), return_inverse=True)
+    lengths = [
+        (
+            cftime.datetime(int(year), 12, 30 if calendar == "360_day" else 31, calendar=calendar)
+        ).dayofyr
+        for year in unique
+    ]
+    return np.array(lengths, dtype=np.int64)[inverse].reshape(np.shape(years))
+
+
+def year_fraction(times: np.ndarray, calendar: str) -> np.ndarray:
+    """Return the position of each day in its year: (day of year - 0.5) / days in the year.
+
+    Parameters
+    ----------
+    times
+        cftime dates, shape (time,).
+    calendar
+        Their calendar.
+
+    Returns
+    -------
+    ndarray
+        float64 in (0, 1), shape (time,).
+    """
+    days = np.array([time.dayofyr for time in times], dtype=np.float64)
+    return (days - 0.5) / year_lengths(years_of(times), calendar)
+
+
+def time_step(times: np.ndarray, path: Path | str) -> TimeStep:
+    """Return whether times are daily, monthly or annual, from their median spacing.
+
+    Raises
+    ------
+    InputError
+        If they are something else. A single time counts as annual.
+    """
+    if len(times) < 2:
+        return "annual"
+    days = _ordinals(times)
+    spacing = float(np.median(np.diff(days)))
+    if abs(spacing - 1) < 0.1:
+        return "daily"
+    if 27 <= spacing <= 32:
+        return "monthly"
+    if 354 <= spacing <= 367:
+        return "annual"
+    raise InputError(
+        f"{path}: time step of {spacing:g} days; daily, monthly or annual values are read"
+    )
+
+
+def step_number(times: np.ndarray, step: TimeStep) -> np.ndarray:
+    """Return consecutive integers for consecutive steps: days, months or years, int64."""
+    if step == "daily":
+        return np.floor(_ordinals(times)).astype(np.int64)
+    if step == "monthly":
+        return np.array([time.year * 12 + time.month - 1 for time in times], dtype=np.int64)
+    return years_of(times)
+
+
+def check_continuous(times: np.ndarray, step: TimeStep, where: str) -> None:
+    """Check that times follow each other without gap, duplicate or disorder.
+
+    Raises
+    ------
+    InputError
+        Naming the first date that breaks the order.
+    """
+    steps = np.diff(step_number(times, step))
+    bad = np.flatnonzero(steps != 1)
+    if len(bad) == 0:
+        return
+    before, after = (str(times[i])[:10] for i in (bad[0], bad[0] + 1))
+    if steps[bad[0]] == 0:
+        raise InputError(f"{where}: {after} stands twice; every step may stand once")
+    if steps[bad[0]] < 0:
+        raise InputError(f"{where}: {after} follows {before}; files overlap or times run backwards")
+    raise InputError(f"{where}: gap between {before} and {after}; a {step} series needs every step")
+
+
+def join_in_time(parts: list[xr.DataArray], where: str) -> xr.DataArray:
+    """Join the files of one series in time, ordered by their first date.
+
+    Parameters
+    ----------
+    parts
+        Arrays with a cftime coordinate ``time`` and the same grid.
+    where
+        What the series is, for messages.
+
+    Raises
+    ------
+    InputError
+        If calendars differ, or steps overlap, repeat or are missing.
+    """
+    calendars = {part["time"].dt.calendar for part in parts}
+    if len(calendars) > 1:
+        raise InputError(f"{where}: files have different calendars: {', '.join(sorted(calendars))}")
+    ordered = sorted(parts, key=lambda part: part["time"].values[0])
+    joined = ordered[0] if len(ordered) == 1 else xr.concat(ordered, "time", join="override")
+    times = joined["time"].values
+    check_continuous(times, time_step(times, where), where)
+    return joined
+
+
+def _ordinals(times: np.ndarray) -> np.ndarray:
+    """Return days since 1850 in the dates' own calendar, float64."""
+    calendar = times[0].calendar
+    return np.asarray(
+        cftime.date2num(times, "days since 1850-01-01", calendar=calendar), dtype=np.float64
+    )

@@ -1,0 +1,25 @@
+"""Areas of latitude-longitude cells on the sphere."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from stook.constants import EARTH_RADIUS_KM
+
+
+def cell_areas(lat_edges: np.ndarray, lon_edges: np.ndarray) -> np.ndarray:
+    """Return the area of every cell, ``R**2 (sin lat2 - sin lat1) (lon2 - lon1)``.
+
+    Parameters
+    ----------
+    lat_edges, lon_edges
+        Ascending cell edges in degrees, shapes (lat + 1,) and (lon + 1,).
+
+    Returns
+    -------
+    ndarray
+        km2, shape (lat, lon); R is 6371 km.
+    """
+    heights = np.diff(np.sin(np.deg2rad(lat_edges)))
+    widths = np.diff(np.deg2rad(lon_edges))
+    return EARTH_RADIUS_KM**2 * heights[:, None] * widths[None, :]
