@@ -139,7 +139,9 @@ class Job:
         self._outputs[path]["variables"] = {
             str(name): _statistics(
                 float(column.isna().sum()),
-                *map(float, (column.min(), column.sum(), column.max())),
+                float(column.min()),
+                float(column.sum()),
+                float(column.max()),
                 float(column.size),
             )
             for name, column in numbers.items()
