@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from contextlib import ExitStack, closing
+from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 
 import netCDF4
@@ -15,7 +18,10 @@ from demo_grids.weather import (
     NATURE,
     NO_BIAS,
     VARIABLES,
+    Bias,
+    Change,
     Latent,
+    State,
     knots,
     latent_weather,
     mean_state,
@@ -25,6 +31,7 @@ from demo_grids.weather import (
 )
 
 RECORD = "HOLLIN-OBS"
+RECORD_SCENARIO = "moderate"
 BLOCK_VALUES = 4_000_000
 CHUNK_DAYS = 1460
 EPOCH = "days since 1850-01-01"
@@ -42,55 +49,89 @@ CELL_METHODS = {
 }
 
 
-def record_axis(domain: Domain) -> TimeAxis:
-    """Return the time axis of the reference record."""
-    return TimeAxis.of(domain.record, "standard")
+@dataclass(frozen=True)
+class Source:
+    """A climate and its weather at the cells of a grid, ready to be sampled.
+
+    Attributes
+    ----------
+    lat, lon
+        Axes of the grid, ascending, degrees.
+    axis
+        Time steps.
+    latent
+        The weather of all time steps.
+    scenario
+        Scenario of the years from 2015 on.
+    bias, change
+        The model's, or nature's.
+    """
+
+    domain: Domain
+    lat: np.ndarray
+    lon: np.ndarray
+    axis: TimeAxis
+    latent: Latent
+    scenario: str
+    bias: Bias = NO_BIAS
+    change: Change = NATURE
+
+    @cached_property
+    def cells(self) -> list[np.ndarray]:
+        """Latitude and longitude of every cell, shape (cell,)."""
+        return [grid.ravel() for grid in np.meshgrid(self.lat, self.lon, indexing="ij")]
+
+    @cached_property
+    def law(self) -> State:
+        """The law at every day of the year and cell."""
+        up, across = self.domain.up(self.cells[0]), self.domain.across(self.cells[1])
+        return mean_state(across, up, self.axis.fractions, self.bias, self.change)
+
+    @cached_property
+    def weights(self) -> np.ndarray:
+        """Weight of every mode at every cell."""
+        return mode_weights(self.domain, *self.cells)
+
+    @cached_property
+    def path(self) -> np.ndarray:
+        """Warming path at every time step, K."""
+        return warming_path(self.scenario, self.axis.fractional_year)
+
+    def daily(self, part: slice) -> dict[str, np.ndarray]:
+        """Return the weather of some time steps, shape (time, cell): degC, mm/day and %."""
+        return weather(
+            self.law, self.axis.day[part], self.path[part], self.latent.days(part),
+            self.weights, self.bias, self.change,
+        )  # fmt: skip
 
 
-def record_latent(domain: Domain, seed: int) -> Latent:
-    """Return the weather of the reference record."""
-    return latent_weather(seed, [(RECORD, len(record_axis(domain).day))], len(knots(domain)))
+def record_source(domain: Domain, seed: int) -> Source:
+    """Return the reference record on the analysis grid."""
+    axis = TimeAxis.of(domain.record, "standard")
+    latent = latent_weather(seed, [(RECORD, len(axis.day))], len(knots(domain)))
+    return Source(domain, domain.lat, domain.lon, axis, latent, RECORD_SCENARIO)
 
 
-def simulation_axis(domain: Domain, model: Model) -> TimeAxis:
-    """Return the time axis of a whole simulation, historical and scenario part together."""
-    return TimeAxis.of(domain.simulated, model.calendar)
-
-
-def simulation_latent(domain: Domain, seed: int, model: Model, scenario: str) -> Latent:
-    """Return the weather of a simulation; scenarios of a model share the historical part."""
-    axis = simulation_axis(domain, model)
+def simulation_source(domain: Domain, seed: int, model: Model, scenario: str) -> Source:
+    """Return a simulation on its own grid; scenarios of a model share the historical part."""
+    axis = TimeAxis.of(domain.simulated, model.calendar)
     past = int((axis.year < FIRST_SCENARIO_YEAR).sum())
     parts = [
         (f"{model.name} historical", past),
         (f"{model.name} {scenario}", len(axis.day) - past),
     ]
-    return latent_weather(seed, [part for part in parts if part[1]], len(knots(domain)))
+    latent = latent_weather(seed, [part for part in parts if part[1]], len(knots(domain)))
+    lat, lon = model.axes(domain)
+    return Source(domain, lat, lon, axis, latent, scenario, model.bias, model.change)
 
 
 def write_record(folder: Path, domain: Domain, seed: int) -> None:
     """Write HOLLIN-OBS: one file a variable, on the analysis grid, degC and mm/day."""
-    axis = record_axis(domain)
-    lat, lon = domain.lat, domain.lon
-    cells = [grid.ravel() for grid in np.meshgrid(lat, lon, indexing="ij")]
-    law = mean_state(domain.across(cells[1]), domain.up(cells[0]), axis.fractions)
-    latent = record_latent(domain, seed)
-    weights = mode_weights(domain, *cells)
-    path = warming_path("moderate", axis.fractional_year)
-    folder.mkdir(parents=True, exist_ok=True)
-    series = _Series(lat, lon, ("lat", "lon"), False, PLAIN_UNITS, _titles(RECORD, "", seed))
-    files = {
-        name: folder / f"{name}_day_{RECORD}_{axis.years[0]}-{axis.years[1]}.nc"
-        for name in VARIABLES
-    }
-    with _Writer(files, series, axis, 0, len(axis.day)) as writer:
-        for part in _blocks(0, len(axis.day), len(cells[0])):
-            writer.put(
-                part,
-                weather(
-                    law, axis.day[part], path[part], latent.days(part), weights, NO_BIAS, NATURE
-                ),
-            )
+    source = record_source(domain, seed)
+    series = _Series(source, ("lat", "lon"), PLAIN_UNITS, _titles(RECORD, "", seed))
+    first, last = domain.record
+    files = {name: folder / f"{name}_day_{RECORD}_{first}-{last}.nc" for name in VARIABLES}
+    _write(files, series, slice(0, len(source.axis.day)))
 
 
 def write_simulation(
@@ -109,35 +150,20 @@ def write_simulation(
     historical
         Whether to write the historical part too (once a model is enough).
     """
-    axis = simulation_axis(domain, model)
-    lat, lon = model.axes(domain)
-    cells = [grid.ravel() for grid in np.meshgrid(lat, lon, indexing="ij")]
-    law = mean_state(
-        domain.across(cells[1]), domain.up(cells[0]), axis.fractions, model.bias, model.change
-    )
-    latent = simulation_latent(domain, seed, model, scenario)
-    weights = mode_weights(domain, *cells)
-    path = warming_path(scenario, axis.fractional_year)
-    folder.mkdir(parents=True, exist_ok=True)
+    source = simulation_source(domain, seed, model, scenario)
+    year = source.axis.year
     for experiment, first, last in file_years(domain, model, scenario):
         if experiment == "historical" and not historical:
             continue
-        days = np.nonzero((axis.year >= first) & (axis.year <= last))[0]
-        begin, end = int(days[0]), int(days[-1]) + 1
         titles = _titles(model.name, experiment, seed)
-        series = _Series(lat, lon, model.axis_names, model.descending, model.units, titles)
+        series = _Series(
+            source, model.axis_names, model.units, titles, model.descending, model.eastward
+        )
         stop = f"{last}12{30 if model.calendar == '360_day' else 31}"
         label = f"day_{model.name}_{experiment}_{REALISATION}_gn_{first}0101-{stop}"
         files = {name: folder / f"{name}_{label}.nc" for name in VARIABLES}
-        with _Writer(files, series, axis, begin, end, model.eastward) as writer:
-            for part in _blocks(begin, end, len(cells[0])):
-                today = latent.days(part)
-                writer.put(
-                    part,
-                    weather(
-                        law, axis.day[part], path[part], today, weights, model.bias, model.change
-                    ),
-                )
+        days = np.nonzero((year >= first) & (year <= last))[0]
+        _write(files, series, slice(int(days[0]), int(days[-1]) + 1))
 
 
 def file_years(domain: Domain, model: Model, scenario: str) -> Iterator[tuple[str, int, int]]:
@@ -189,99 +215,66 @@ def _titles(source: str, experiment: str, seed: int) -> dict[str, str]:
     return attributes
 
 
+@dataclass(frozen=True)
 class _Series:
-    """What all files of a series share."""
+    """What all files of a series share; see `Model` for the fields."""
 
-    def __init__(
-        self,
-        lat: np.ndarray,
-        lon: np.ndarray,
-        names: tuple[str, str],
-        descending: bool,
-        units: dict[str, str],
-        titles: dict[str, str],
-    ) -> None:
-        self.lat, self.lon, self.names = lat, lon, names
-        self.descending, self.units, self.titles = descending, units, titles
+    source: Source
+    names: tuple[str, str]
+    units: dict[str, str]
+    titles: dict[str, str]
+    descending: bool = False
+    eastward: bool = False
 
 
-class _Writer:
-    """Open files of one period, one a variable, written block by block."""
-
-    def __init__(
-        self,
-        files: dict[str, Path],
-        series: _Series,
-        axis: TimeAxis,
-        begin: int,
-        end: int,
-        eastward: bool = False,
-    ) -> None:
-        self._series, self._begin = series, begin
-        self._open = {
-            name: self._create(name, path, axis, begin, end, eastward)
+def _write(files: dict[str, Path], series: _Series, days: slice) -> None:
+    """Write the files of one period, one a variable, block by block."""
+    source = series.source
+    shape = (-1, len(source.lat), len(source.lon))
+    with ExitStack() as stack:
+        datasets = {
+            name: stack.enter_context(closing(_create(name, path, series, days)))
             for name, path in files.items()
         }
-
-    def __enter__(self) -> _Writer:
-        return self
-
-    def __exit__(self, *exception: object) -> None:
-        for dataset in self._open.values():
-            dataset.close()
-
-    def put(self, part: slice, values: dict[str, np.ndarray]) -> None:
-        """Write the values of some days, shape (time, cell), degC, mm/day and %."""
-        shape = (-1, len(self._series.lat), len(self._series.lon))
-        for name, dataset in self._open.items():
-            grid = _convert(values[name], name, self._series.units[name]).reshape(shape)
-            if self._series.descending:
-                grid = grid[:, ::-1]
-            days = slice(part.start - self._begin, part.stop - self._begin)
-            dataset[name][days] = grid.astype("f4")
-
-    def _create(
-        self, name: str, path: Path, axis: TimeAxis, begin: int, end: int, eastward: bool
-    ) -> netCDF4.Dataset:
-        series = self._series
-        dataset = netCDF4.Dataset(path, "w", format="NETCDF4")
-        dataset.setncatts(series.titles)
-        dataset.createDimension("time", end - begin)
-        dataset.createDimension("bnds", 2)
-        _time(dataset, axis, begin, end)
-        lon = series.lon % 360 if eastward else series.lon
-        lat = series.lat[::-1] if series.descending else series.lat
-        for label, standard, letter, values in zip(
-            series.names, ("latitude", "longitude"), "YX", (lat, lon), strict=True
-        ):
-            unit = "degrees_north" if letter == "Y" else "degrees_east"
-            _axis(dataset, label, {"standard_name": standard, "units": unit}, letter, values)
-        standard, long_name = ATTRIBUTES[name]
-        dims = ("time", *series.names)
-        chunks = (min(CHUNK_DAYS, end - begin), *(min(24, len(axis)) for axis in (lat, lon)))
-        variable = dataset.createVariable(
-            name, "f4", dims, zlib=True, complevel=1, shuffle=True, chunksizes=chunks,
-            fill_value=np.float32(1e20),
-        )  # fmt: skip
-        unit = series.units[name]
-        # CMIP gives rain as a mass flux; a depth per day has a standard name of its own.
-        if name == "pr" and unit == "mm day-1":
-            standard = "lwe_precipitation_rate"
-        variable.setncatts(
-            {
-                "standard_name": standard,
-                "long_name": long_name,
-                "units": unit,
-                "cell_methods": CELL_METHODS[name],
-            }
-        )
-        if name in ("tasmin", "tasmax"):
-            variable.units_metadata = "temperature: on_scale"
-        return dataset
+        for part in _blocks(days.start, days.stop, shape[1] * shape[2]):
+            values = source.daily(part)
+            inside = slice(part.start - days.start, part.stop - days.start)
+            for name, dataset in datasets.items():
+                grid = _convert(values[name], name, series.units[name]).reshape(shape)
+                dataset[name][inside] = grid[:, ::-1] if series.descending else grid
 
 
-def _time(dataset: netCDF4.Dataset, axis: TimeAxis, begin: int, end: int) -> None:
-    midnight = axis.start() + np.arange(begin, end)
+def _create(name: str, path: Path, series: _Series, days: slice) -> netCDF4.Dataset:
+    """Create a file with its coordinates and an empty variable."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    dataset = netCDF4.Dataset(path, "w", format="NETCDF4")
+    dataset.setncatts(series.titles)
+    dataset.createDimension("time", days.stop - days.start)
+    dataset.createDimension("bnds", 2)
+    _time(dataset, series.source.axis, days)
+    lon = series.source.lon % 360 if series.eastward else series.source.lon
+    lat = series.source.lat[::-1] if series.descending else series.source.lat
+    _axis(dataset, series.names[0], "latitude", "degrees_north", "Y", lat)
+    _axis(dataset, series.names[1], "longitude", "degrees_east", "X", lon)
+    chunks = (min(CHUNK_DAYS, days.stop - days.start), *(min(24, len(a)) for a in (lat, lon)))
+    variable = dataset.createVariable(
+        name, "f4", ("time", *series.names), zlib=True, complevel=1, shuffle=True,
+        chunksizes=chunks, fill_value=np.float32(1e20),
+    )  # fmt: skip
+    standard, long_name = ATTRIBUTES[name]
+    unit = series.units[name]
+    # CMIP gives rain as a mass flux; a depth per day has a standard name of its own.
+    if name == "pr" and unit == "mm day-1":
+        standard = "lwe_precipitation_rate"
+    attributes = {"standard_name": standard, "long_name": long_name, "units": unit}
+    variable.setncatts(attributes | {"cell_methods": CELL_METHODS[name]})
+    if name in ("tasmin", "tasmax"):
+        variable.units_metadata = "temperature: on_scale"
+    return dataset
+
+
+def _time(dataset: netCDF4.Dataset, axis: TimeAxis, days: slice) -> None:
+    midnight = axis.start() + np.arange(days.start, days.stop)
     time = dataset.createVariable("time", "f8", ("time",))
     time.setncatts(
         {
@@ -292,6 +285,8 @@ def _time(dataset: netCDF4.Dataset, axis: TimeAxis, begin: int, end: int) -> Non
             "bounds": "time_bnds",
         }
     )
+    if axis.calendar == "standard":
+        time.units_metadata = "leap_seconds: none"
     time[:] = midnight + 0.5
     dataset.createVariable("time_bnds", "f8", ("time", "bnds"))[:] = np.stack(
         [midnight, midnight + 1], axis=1
@@ -299,13 +294,14 @@ def _time(dataset: netCDF4.Dataset, axis: TimeAxis, begin: int, end: int) -> Non
 
 
 def _axis(
-    dataset: netCDF4.Dataset, name: str, attributes: dict[str, str], letter: str, values: np.ndarray
+    dataset: netCDF4.Dataset, name: str, standard: str, unit: str, letter: str, values: np.ndarray
 ) -> None:
     dataset.createDimension(name, len(values))
     variable = dataset.createVariable(name, "f8", (name,))
-    variable.setncatts(attributes | {"axis": letter, "bounds": f"{name}_bnds"})
+    attributes = {"standard_name": standard, "units": unit, "axis": letter}
+    variable.setncatts(attributes | {"bounds": f"{name}_bnds"})
     variable[:] = values
-    half = abs(values[1] - values[0]) / 2 * np.sign(values[1] - values[0])
+    half = (values[1] - values[0]) / 2
     dataset.createVariable(f"{name}_bnds", "f8", (name, "bnds"))[:] = np.stack(
         [values - half, values + half], axis=1
     )

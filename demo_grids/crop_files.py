@@ -81,6 +81,7 @@ def write_crops(folder: Path, domain: Domain) -> None:
 def write_districts(path: Path, domain: Domain) -> None:
     """Write the districts as a GeoPackage in an equal-area projection, metres."""
     frame = districts(domain).to_crs(CRS)
+    path.unlink(missing_ok=True)
     pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": FIXED_DATE})
     try:
         frame.to_file(path, layer="districts", driver="GPKG")

@@ -20,32 +20,28 @@ from stook.season.definition import (
 Weather = dict[str, np.ndarray]
 
 
-def season_rows(planting: float, maturity: float, first_day: int, length: int) -> slice:
-    """Return the days of a season as rows of a series.
+def season_days(planting: float, maturity: float, length: int) -> range:
+    """Return the days of a season, counted from 1 January (0) of the year of planting.
 
     Parameters
     ----------
     planting, maturity
         Days of the year of the real calendar, 1 to 365, both in the season; maturity before
         planting is in the next year.
-    first_day
-        Row of 1 January of the planting year.
     length
         Days of a year of the calendar.
     """
     last = maturity if maturity > planting else maturity + 365
-    begin = first_day + round((planting - 1) * length / 365)
-    return slice(begin, first_day + round(last * length / 365))
+    return range(round((planting - 1) * length / 365), round(last * length / 365))
 
 
-def phase_rows(season: slice, phase: tuple[float, float]) -> slice:
+def phase_days(season: range, phase: tuple[float, float]) -> range:
     """Return the days of a growth phase given as fractions of its season."""
-    days = season.stop - season.start
-    return slice(season.start + round(phase[0] * days), season.start + round(phase[1] * days))
+    return season[round(phase[0] * len(season)) : round(phase[1] * len(season))]
 
 
 def season_index(weather: Weather, definition: IndexDefinition, real_days: float) -> np.ndarray:
-    """Return an index over the days given, shape (time, cell) -> (cell).
+    """Return an index over the days given, shape (time, ...) -> (...).
 
     Parameters
     ----------
@@ -91,7 +87,7 @@ def degree_days(low: np.ndarray, high: np.ndarray, threshold: float) -> np.ndarr
 
 def longest_run(dry: np.ndarray) -> np.ndarray:
     """Return the longest run of True along the first axis."""
-    longest = run = np.zeros(dry.shape[1])
+    longest = run = np.zeros(dry.shape[1:])
     for today in dry:
         run = np.where(today, run + 1, 0)
         longest = np.maximum(longest, run)

@@ -17,6 +17,7 @@ from scipy import signal, special
 from stook.randomness import generator
 
 from demo_grids.domain import FIRST_SCENARIO_YEAR, Domain
+from demo_grids.kernels import combine
 
 VARIABLES = ("tasmin", "tasmax", "pr", "hurs")
 KNOT_STEP = 2.2
@@ -278,17 +279,19 @@ def weather(
     bias, change
         The model's; nature's by default.
     """
-    wetness = np.float32(np.sqrt(1 - SLOW_WET_SHARE)) * (latent.wet_fast @ weights)
-    wetness += np.float32(np.sqrt(SLOW_WET_SHARE)) * (latent.wet_slow @ weights)
-    fast = latent.fast @ weights
+    wetness = np.float32(np.sqrt(1 - SLOW_WET_SHARE)) * combine(latent.wet_fast, weights)
+    wetness += np.float32(np.sqrt(SLOW_WET_SHARE)) * combine(latent.wet_slow, weights)
+    fast = combine(latent.fast, weights)
     warm = path.astype(np.float32)[:, None]
     mean = state.temperature[day] + state.warming[day] * warm
     anomaly = fast * state.spread[day]
     anomaly += np.float32(bias.anomaly) * (
-        np.float32(SLOW_SD) * (latent.slow @ weights) - np.float32(WET_COOLING) * wetness
+        np.float32(SLOW_SD) * combine(latent.slow, weights) - np.float32(WET_COOLING) * wetness
     )
     mean += anomaly
-    log_range = np.float32(RANGE_NOISE) * (latent.noise @ weights) - np.float32(RANGE_WET) * wetness
+    log_range = (
+        np.float32(RANGE_NOISE) * combine(latent.noise, weights) - np.float32(RANGE_WET) * wetness
+    )
     log_range -= np.float32((RANGE_WET**2 + RANGE_NOISE**2) / 2)
     factor = diurnal_change(path, change).astype(np.float32)[:, None]
     half = state.diurnal[day] * np.exp(log_range) * factor / 2

@@ -7,9 +7,10 @@ from functools import partial
 from pathlib import Path
 
 from demo_grids.assessment_file import assessment_text
-from demo_grids.climate_files import scenarios, write_record, write_simulation
+from demo_grids.climate_files import RECORD, scenarios, write_record, write_simulation
 from demo_grids.crop_files import write_crops, write_districts
 from demo_grids.domain import domain
+from demo_grids.models import MODELS
 from demo_grids.responses import write_responses
 
 SEED = 20260101
@@ -29,7 +30,8 @@ def generate(
     Parameters
     ----------
     folder
-        Where to write; made if it is not there, files of the same name are replaced.
+        Where to write; made if it is not there. An earlier world in it is replaced. The
+        assessment file is written last, so that an interrupted world has none.
     size
         ``tiny`` (tests) or ``demo``.
     seed
@@ -54,6 +56,7 @@ def generate(
     world = domain(size, pixels, years)
     folder = Path(folder)
     folder.mkdir(parents=True, exist_ok=True)
+    _remove_earlier(folder)
     parts: list[tuple[str, Callable[[], None]]] = [
         ("crop layers", partial(write_crops, folder / "crops", world)),
         ("districts", partial(write_districts, folder / "districts.gpkg", world)),
@@ -73,3 +76,13 @@ def generate(
     if progress is not None:
         progress(len(parts), len(parts), "done")
     return path
+
+
+def _remove_earlier(folder: Path) -> None:
+    """Remove the files of an earlier world that a world of another size would not replace."""
+    (folder / "assessment.yaml").unlink(missing_ok=True)
+    for model in MODELS:
+        for path in (folder / "climate" / model).glob(f"*_day_{model}_*.nc"):
+            path.unlink()
+    for path in (folder / "reference").glob(f"*_day_{RECORD}_*.nc"):
+        path.unlink()
