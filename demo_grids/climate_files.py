@@ -175,8 +175,8 @@ def file_years(domain: Domain, model: Model, scenario: str) -> Iterator[tuple[st
         (scenario, max(first, boundary), last),
     ):
         while begin <= end:
-            step = model.file_years or 1000
-            stop = min(end, begin + (step - 1 - (begin - 1) % step))
+            step = model.file_years
+            stop = end if step is None else min(end, begin + step - 1 - (begin - 1) % step)
             yield experiment, begin, stop
             begin = stop + 1
 
