@@ -1,0 +1,120 @@
+"""Jobs of the trend stage: files in and out."""
+
+from __future__ import annotations
+
+from contextlib import ExitStack
+
+import numpy as np
+import pandas as pd
+import xarray as xr
+
+from stook.assessment.layout import Layout
+from stook.assessment.schema import Assessment
+from stook.assessment.variables import system_indices
+from stook.audit.ledger import Job
+from stook.grids.analysis import AnalysisGrid, tile_count
+from stook.grids.files import PIXEL_CHUNK, open_result, read_table
+from stook.season.definition import describe, unit_of
+from stook.trend.periods import trend_periods
+from stook.trend.pixels import Domain, Quantity, map_trends
+from stook.trend.regions import COLUMNS, regional_trends, regional_yields
+from stook.trend.series import TrendOptions
+
+_CHUNKS = {"year": -1, "lat": PIXEL_CHUNK, "lon": -1}
+
+
+def pixels(assessment: Assessment, simulation: str, crop: str, system: str) -> None:
+    """Write the trend maps of one simulation, crop and system, and their distributions.
+
+    Reads the season indices, the yields and the crop layers; writes
+    `Layout.trend_pixels` and `Layout.trend_distribution`.
+    """
+    layout = Layout.of(assessment)
+    tiles = [
+        layout.season(simulation, crop, system, tile) for tile in range(tile_count(assessment))
+    ]
+    source = layout.yields(simulation, crop, system)
+    wildcards = {"simulation": simulation, "crop": crop, "system": system}
+    parents = [layout.layers, *tiles, source]
+    with Job(assessment, "trend_pixels", parents, wildcards) as job, ExitStack() as stack:
+        layers = stack.enter_context(open_result(layout.layers))
+        parts = [stack.enter_context(open_result(path, _CHUNKS)) for path in tiles]
+        season = (
+            xr.concat(parts, "lat", data_vars="minimal", join="exact") if parts[1:] else parts[0]
+        )
+        yields = stack.enter_context(open_result(source, _CHUNKS))
+        domain = _domain(layers, crop, system)
+        periods = trend_periods(assessment, yields["year"].values)
+        options = TrendOptions.of(assessment)
+        found = []
+        for quantity in _quantities(assessment, crop, system):
+            dataset = yields if quantity.name == "yield" else season
+            found.append(
+                map_trends(
+                    dataset[quantity.name],
+                    dataset["reason"].values,
+                    quantity,
+                    domain,
+                    periods,
+                    options,
+                    assessment.store.block_mb,
+                )
+            )
+        grids = xr.merge([one.grids for one in found])
+        grids = grids.assign_coords(AnalysisGrid.from_dataset(layers).coordinates())
+        title = f"Trends of {crop}, {system}, {simulation}"
+        job.netcdf(
+            _with_years(grids, periods), layout.trend_pixels(simulation, crop, system), title
+        )
+        job.table(
+            pd.concat([one.distribution for one in found], ignore_index=True),
+            layout.trend_distribution(simulation, crop, system),
+        )
+
+
+def regions(assessment: Assessment, simulation: str) -> None:
+    """Write the trends of the regional yields of one simulation, all crops.
+
+    Reads the totals of every crop; writes `Layout.trend_regions`.
+    """
+    layout = Layout.of(assessment)
+    parents = {crop: layout.totals(simulation, crop) for crop in assessment.crops}
+    wildcards = {"simulation": simulation}
+    with Job(assessment, "trend_regions", parents.values(), wildcards) as job:
+        tables = []
+        for crop, path in parents.items():
+            yields = regional_yields(read_table(path))
+            if yields.empty:
+                continue
+            periods = trend_periods(assessment, yields.index.to_numpy())
+            tables.append(
+                regional_trends(
+                    yields, crop, periods, assessment.periods.baseline, TrendOptions.of(assessment)
+                )
+            )
+        tables = [table for table in tables if not table.empty]
+        empty = pd.DataFrame(columns=COLUMNS)
+        table = pd.concat(tables, ignore_index=True) if tables else empty
+        job.table(table, layout.trend_regions(simulation))
+
+
+def _quantities(assessment: Assessment, crop: str, system: str) -> list[Quantity]:
+    indices = [
+        Quantity(name, describe(definition), unit_of(definition))
+        for name, definition in system_indices(assessment, crop, system).items()
+    ]
+    return [*indices, Quantity("yield", f"{crop} yield, {system}", "t ha-1")]
+
+
+def _domain(layers: xr.Dataset, crop: str, system: str) -> Domain:
+    layer = layers.sel(crop_system=f"{crop}_{system}")
+    return Domain(layer["reason"].values, layer["area"].values, layers["main_region"].values)
+
+
+def _with_years(grids: xr.Dataset, periods: dict[str, tuple[int, int]]) -> xr.Dataset:
+    """Add the first and the last year of each period."""
+    ends = np.array(list(periods.values()), dtype=np.int32).reshape(len(periods), 2)
+    return grids.assign_coords(
+        first_year=("period", ends[:, 0], {"long_name": "first year of the period"}),
+        last_year=("period", ends[:, 1], {"long_name": "last year of the period"}),
+    )

@@ -1,0 +1,233 @@
+"""Trend maps: the trends of every pixel of a crop, labelled, from series read in bands of rows."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+import xarray as xr
+
+from stook.grids.missing import Reason, reason_attributes
+from stook.trend.discovery import UNKNOWN, rate_for_level, significant_in_families
+from stook.trend.distribution import Histogram, distribution_table, whole_areas
+from stook.trend.periods import is_covered
+from stook.trend.series import RandomTrends, SeriesTrends, TrendOptions, series_trends
+
+YEARS_PER_DECADE = 10.0
+
+_BYTES_PER_RANDOM = 40  # of one series and randomisation, temporary arrays included
+
+
+@dataclass(frozen=True)
+class Quantity:
+    """What the trend is of.
+
+    Attributes
+    ----------
+    name
+        Name of the variable, such as ``yield`` or an index.
+    description
+        In words.
+    unit
+        UDUNITS unit of the values.
+    """
+
+    name: str
+    description: str
+    unit: str
+
+    @property
+    def trend_unit(self) -> str:
+        """UDUNITS unit of a trend: the quantity's unit per decade."""
+        return f"0.1 {self.unit.replace('degC', 'K')} year-1"
+
+
+@dataclass(frozen=True)
+class Domain:
+    """The pixels of one crop and water system.
+
+    Attributes
+    ----------
+    reason
+        int8 (lat, lon): 0 where the crop grows.
+    area
+        Harvested area, ha (lat, lon).
+    region
+        int (lat, lon): number of the region a pixel is judged in, -1 for none.
+    """
+
+    reason: np.ndarray
+    area: np.ndarray
+    region: np.ndarray
+
+    @property
+    def there(self) -> np.ndarray:
+        """Return where the crop grows, bool (lat, lon)."""
+        return self.reason == int(Reason.VALID)
+
+
+@dataclass(frozen=True)
+class MapTrends:
+    """The trends of one quantity: grids (period, lat, lon) and the distribution table."""
+
+    grids: xr.Dataset
+    distribution: pd.DataFrame
+
+
+def map_trends(
+    series: xr.DataArray,
+    reason: np.ndarray,
+    quantity: Quantity,
+    domain: Domain,
+    periods: Mapping[str, tuple[int, int]],
+    options: TrendOptions,
+    block_mb: float,
+) -> MapTrends:
+    """Return the trends of one quantity at every pixel of a crop.
+
+    Parameters
+    ----------
+    series
+        float64 (year, lat, lon), lazy or not; read a band of rows at a time.
+    reason
+        int8 (lat, lon): why the series of a pixel is missing, if it is.
+    quantity
+        Its name, description and unit.
+    domain
+        The crop's pixels.
+    periods
+        First and last year by name; one that the series does not cover has no trends.
+    options
+        Seed, number of randomisations and the like.
+    block_mb
+        Size of the largest arrays, MiB.
+    """
+    years = series["year"].values.astype(np.int64)
+    shape = (len(periods), *domain.there.shape)
+    found = _Grids.empty(shape)
+    histograms = {name: (Histogram(), Histogram()) for name in periods}
+    for rows, columns, values in _bands(series, domain.there, options, block_mb):
+        areas = whole_areas(domain.area[rows, columns])
+        for k, (name, (first, last)) in enumerate(periods.items()):
+            if not is_covered((first, last), years):
+                continue
+            inside = (years >= first) & (years <= last)
+            trends, random = series_trends(values[inside], years[inside], options, True)
+            assert random is not None
+            found.store(k, rows, columns, trends)
+            _collect(histograms[name], random, areas)
+    tables = [distribution_table(quantity.name, name, *pair) for name, pair in histograms.items()]
+    return MapTrends(
+        found.dataset(quantity, domain, reason, list(periods), options),
+        pd.concat(tables, ignore_index=True),
+    )
+
+
+def _bands(
+    series: xr.DataArray, there: np.ndarray, options: TrendOptions, block_mb: float
+) -> Iterator[tuple[np.ndarray, np.ndarray, np.ndarray]]:
+    """Yield rows, columns and values (year, pixel) of the crop's pixels, in row-major order."""
+    most = max(1, int(block_mb * 2**20 / (_BYTES_PER_RANDOM * (options.count + 1))))
+    height = max(1, int(block_mb * 2**20 / (8 * series.sizes["year"] * series.sizes["lon"])))
+    for top in range(0, there.shape[0], height):
+        band = slice(top, top + height)
+        rows, columns = np.nonzero(there[band])
+        if rows.size == 0:
+            continue
+        values = series.isel(lat=band).transpose("year", "lat", "lon").values
+        for first in range(0, rows.size, most):
+            part = slice(first, first + most)
+            block = values[:, rows[part], columns[part]].astype(np.float64)
+            yield rows[part] + top, columns[part], block
+
+
+def _collect(pair: tuple[Histogram, Histogram], random: RandomTrends, areas: np.ndarray) -> None:
+    observed, randomised = pair
+    slopes = random.slopes * YEARS_PER_DECADE
+    observed.add(slopes[:1], areas)
+    randomised.add(slopes[1:], areas)
+
+
+@dataclass
+class _Grids:
+    """Arrays (period, lat, lon) that fill up band by band; slopes per decade."""
+
+    years: np.ndarray
+    values: dict[str, np.ndarray]
+
+    @classmethod
+    def empty(cls, shape: tuple[int, ...]) -> _Grids:
+        names = ("slope", "theil_sen", "lag1", "p_ar1", "p_shuffle")
+        return cls(np.zeros(shape, np.int16), {name: np.full(shape, np.nan) for name in names})
+
+    def store(self, k: int, rows: np.ndarray, columns: np.ndarray, trends: SeriesTrends) -> None:
+        self.years[k, rows, columns] = trends.years
+        for name, grid in self.values.items():
+            scale = YEARS_PER_DECADE if name in ("slope", "theil_sen") else 1.0
+            grid[k, rows, columns] = scale * getattr(trends, name)
+
+    def dataset(
+        self,
+        quantity: Quantity,
+        domain: Domain,
+        reason: np.ndarray,
+        periods: list[str],
+        options: TrendOptions,
+    ) -> xr.Dataset:
+        """Return the labelled grids, with the false discovery rate applied in each region."""
+        family = np.where(domain.there, domain.region, -1).ravel()
+        p = self.values[f"p_{options.method}"].reshape(len(periods), -1)
+        significant = np.stack([significant_in_families(row, family, options.level) for row in p])
+        short = np.isnan(self.values["slope"]) & domain.there & (reason == int(Reason.VALID))
+        why = np.where(domain.there, reason, domain.reason)
+        reasons = np.where(short, int(Reason.TOO_FEW_VALUES), why).astype(np.int8)
+        arrays = self.values | {
+            "significant": significant.reshape(self.years.shape),
+            "years": self.years,
+            "reason": reasons,
+        }
+        attributes = _attributes(quantity, options)
+        dims = ("period", "lat", "lon")
+        return xr.Dataset(
+            {
+                f"{name}_{quantity.name}": (dims, arrays[name], attributes[name])
+                for name in attributes
+            },
+            {"period": ("period", np.array(periods, dtype=object), {"long_name": "period"})},
+        )
+
+
+def _attributes(quantity: Quantity, options: TrendOptions) -> dict[str, dict[str, object]]:
+    what, unit = quantity.description, quantity.trend_unit
+    rate = rate_for_level(options.level)
+    test = {"ar1": "AR(1) surrogates", "shuffle": "shuffled years"}
+    return {
+        "slope": {"long_name": f"least-squares trend of {what}, per decade", "units": unit},
+        "theil_sen": {"long_name": f"Theil-Sen trend of {what}, per decade", "units": unit},
+        "p_ar1": {
+            "long_name": f"p-value of the trend of {what} against AR(1) surrogates, two-sided",
+            "units": "1",
+            "randomisations": np.int32(options.count),
+        },
+        "p_shuffle": {
+            "long_name": f"p-value of the trend of {what} against shuffled years, two-sided",
+            "units": "1",
+            "randomisations": np.int32(options.count),
+            "comment": "right for independent years only: see the lag-1 correlation",
+        },
+        "lag1": {
+            "long_name": f"bias-corrected lag-1 correlation of detrended {what}",
+            "units": "1",
+        },
+        "significant": {
+            "long_name": f"trend of {what} is significant among the pixels of its region, "
+            f"{test[options.method]}, false discovery rate {rate:g}",
+            "flag_values": np.array([UNKNOWN, 0, 1], dtype=np.int8),
+            "flag_meanings": "unknown not_significant significant",
+            "false_discovery_rate": rate,
+        },
+        "years": {"long_name": f"years of {what} in the trend", "units": "1"},
+        "reason": reason_attributes() | {"long_name": f"reason why a trend of {what} is missing"},
+    }

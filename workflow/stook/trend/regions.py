@@ -1,0 +1,98 @@
+"""Trends of regional yields, as a table."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+import pandas as pd
+
+from stook.constants import CENTRAL_DRAW
+from stook.trend.periods import is_covered
+from stook.trend.pixels import YEARS_PER_DECADE
+from stook.trend.series import TrendOptions, series_trends
+
+COLUMNS = [
+    "crop",
+    "system",
+    "region",
+    "period",
+    "years",
+    "slope",
+    "slope_percent",
+    "theil_sen",
+    "lag1",
+    "p_ar1",
+    "p_shuffle",
+]
+
+
+def regional_yields(totals: pd.DataFrame) -> pd.DataFrame:
+    """Return central yields, t/ha: index year, columns (region, system) in order of appearance.
+
+    Parameters
+    ----------
+    totals
+        Columns region, system, year, draw, production_t, area_ha.
+    """
+    central = totals[totals["draw"] == CENTRAL_DRAW]
+    grown = central[central["area_ha"] > 0]
+    values = grown.assign(value=grown["production_t"] / grown["area_ha"])
+    table = values.pivot_table(
+        index="year", columns=["region", "system"], values="value", sort=False, dropna=False
+    )
+    order = pd.MultiIndex.from_frame(values[["region", "system"]].drop_duplicates())
+    return table.reindex(columns=order).sort_index()
+
+
+def regional_trends(
+    yields: pd.DataFrame,
+    crop: str,
+    periods: Mapping[str, tuple[int, int]],
+    baseline: tuple[int, int],
+    options: TrendOptions,
+) -> pd.DataFrame:
+    """Return the trends of regional yields, one row per region, system and period.
+
+    Parameters
+    ----------
+    yields
+        t/ha, from `regional_yields`.
+    crop
+        Name of the crop.
+    periods
+        First and last year by name; one that the series do not cover gives no rows.
+    baseline
+        Years whose mean yield `slope_percent` refers to.
+    options
+        Seed, number of randomisations and the like.
+
+    Returns
+    -------
+    DataFrame
+        Columns `COLUMNS`: slope and theil_sen in t/ha per decade, slope_percent in percent of the
+        baseline mean per decade; NaN where there are too few years.
+    """
+    years = yields.index.to_numpy().astype(np.int64)
+    base = yields[(years >= baseline[0]) & (years <= baseline[1])].mean().to_numpy()
+    parts = []
+    for name, (first, last) in periods.items():
+        if yields.empty or not is_covered((first, last), years):
+            continue
+        inside = (years >= first) & (years <= last)
+        values = yields.to_numpy(dtype=np.float64)[inside]
+        trends, _ = series_trends(values, years[inside], options)
+        slope = YEARS_PER_DECADE * trends.slope
+        part = yields.columns.to_frame(index=False).assign(
+            crop=crop,
+            period=name,
+            years=trends.years,
+            slope=slope,
+            slope_percent=np.where(base > 0, 100.0 * slope / np.where(base > 0, base, 1), np.nan),
+            theil_sen=YEARS_PER_DECADE * trends.theil_sen,
+            lag1=trends.lag1,
+            p_ar1=trends.p_ar1,
+            p_shuffle=trends.p_shuffle,
+        )
+        parts.append(part[COLUMNS])
+    return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=COLUMNS)
