@@ -259,7 +259,7 @@ class Trend(Section):
     periods: dict[Name, Years] = Field(
         default_factory=dict, description="default: the whole of each simulation"
     )
-    method: Literal["ar1", "shuffle"] = Field(
+    method: Literal["ar1", "shuffle", "blocks", "phases"] = Field(
         "ar1", description="test that headlines are drawn from"
     )
     randomisations: int = Field(999, ge=99, le=100000)

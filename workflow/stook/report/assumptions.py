@@ -102,6 +102,8 @@ def trend(assessment: Assessment) -> str:
     how = {
         "ar1": "series of the same lag-1 correlation but no trend (AR(1) surrogates)",
         "shuffle": "the years in random order",
+        "blocks": "blocks of years in random order",
+        "phases": "series of the same spectrum with Fourier phases at random",
     }[spec.method]
     return (
         f"Least-squares slopes against {spec.randomisations} randomisations; p-values quoted here "

@@ -106,7 +106,7 @@ def map_trends(
     """
     years = series["year"].values.astype(np.int64)
     shape = (len(periods), *domain.there.shape)
-    found = _Grids.empty(shape)
+    found = _Grids.empty(shape, options.tests)
     histograms = {name: (Histogram(), Histogram()) for name in periods}
     for rows, columns, values in _bands(series, domain.there, options, block_mb):
         areas = whole_areas(domain.area[rows, columns])
@@ -158,15 +158,19 @@ class _Grids:
     values: dict[str, np.ndarray]
 
     @classmethod
-    def empty(cls, shape: tuple[int, ...]) -> _Grids:
-        names = ("slope", "theil_sen", "lag1", "p_ar1", "p_shuffle")
+    def empty(cls, shape: tuple[int, ...], tests: tuple[str, ...]) -> _Grids:
+        names = ("slope", "theil_sen", "lag1", *(f"p_{test}" for test in tests))
         return cls(np.zeros(shape, np.int16), {name: np.full(shape, np.nan) for name in names})
 
     def store(self, k: int, rows: np.ndarray, columns: np.ndarray, trends: SeriesTrends) -> None:
         self.years[k, rows, columns] = trends.years
-        for name, grid in self.values.items():
-            scale = YEARS_PER_DECADE if name in ("slope", "theil_sen") else 1.0
-            grid[k, rows, columns] = scale * getattr(trends, name)
+        found = {
+            "slope": YEARS_PER_DECADE * trends.slope,
+            "theil_sen": YEARS_PER_DECADE * trends.theil_sen,
+            "lag1": trends.lag1,
+        } | {f"p_{test}": p for test, p in trends.p.items()}
+        for name, values in found.items():
+            self.values[name][k, rows, columns] = values
 
     def dataset(
         self,
@@ -199,31 +203,37 @@ class _Grids:
         )
 
 
+_TEST = {
+    "ar1": "AR(1) surrogates",
+    "shuffle": "shuffled years",
+    "blocks": "moving blocks",
+    "phases": "random Fourier phases",
+}
+
+
 def _attributes(quantity: Quantity, options: TrendOptions) -> dict[str, dict[str, object]]:
     what, unit = quantity.description, quantity.trend_unit
     rate = rate_for_level(options.level)
-    test = {"ar1": "AR(1) surrogates", "shuffle": "shuffled years"}
+    p_values: dict[str, dict[str, object]] = {
+        f"p_{test}": {
+            "long_name": f"p-value of the trend of {what} against {_TEST[test]}, two-sided",
+            "units": "1",
+            "randomisations": np.int32(options.count),
+        }
+        for test in options.tests
+    }
+    p_values["p_shuffle"]["comment"] = "right for independent years only: see the lag-1 correlation"
     return {
         "slope": {"long_name": f"least-squares trend of {what}, per decade", "units": unit},
         "theil_sen": {"long_name": f"Theil-Sen trend of {what}, per decade", "units": unit},
-        "p_ar1": {
-            "long_name": f"p-value of the trend of {what} against AR(1) surrogates, two-sided",
-            "units": "1",
-            "randomisations": np.int32(options.count),
-        },
-        "p_shuffle": {
-            "long_name": f"p-value of the trend of {what} against shuffled years, two-sided",
-            "units": "1",
-            "randomisations": np.int32(options.count),
-            "comment": "right for independent years only: see the lag-1 correlation",
-        },
+        **p_values,
         "lag1": {
             "long_name": f"bias-corrected lag-1 correlation of detrended {what}",
             "units": "1",
         },
         "significant": {
             "long_name": f"trend of {what} is significant among the pixels of its region, "
-            f"{test[options.method]}, false discovery rate {rate:g}",
+            f"{_TEST[options.method]}, false discovery rate {rate:g}",
             "flag_values": np.array([UNKNOWN, 0, 1], dtype=np.int8),
             "flag_meanings": "unknown not_significant significant",
             "false_discovery_rate": rate,

@@ -91,8 +91,7 @@ def regional_trends(
             slope_percent=np.where(base > 0, 100.0 * slope / np.where(base > 0, base, 1), np.nan),
             theil_sen=YEARS_PER_DECADE * trends.theil_sen,
             lag1=trends.lag1,
-            p_ar1=trends.p_ar1,
-            p_shuffle=trends.p_shuffle,
+            **{f"p_{test}": p for test, p in trends.p.items()},
         )
-        parts.append(part[COLUMNS])
+        parts.append(part[[*COLUMNS, *(c for c in part if c not in COLUMNS)]])
     return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=COLUMNS)

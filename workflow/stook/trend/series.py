@@ -3,20 +3,15 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 
 import dask
 import numpy as np
 
 from stook.assessment.schema import Assessment
 from stook.trend import kernels
-from stook.trend.randomise import (
-    Randomisations,
-    centred_weights,
-    probability,
-    randomisations,
-    to_integers,
-)
+from stook.trend.blocktest import ROUNDING, Detrended, block_test
+from stook.trend.randomise import Randomisations, randomisations
 
 BLOCK = 256
 """Series a kernel call works on (measured: the sums of a block stay in the first cache)."""
@@ -24,8 +19,9 @@ BLOCK = 256
 LARGEST_GAP_SHARE = 0.1
 """Largest share of the years between first and last that may be missing."""
 
-ROUNDING = 1e-10
-"""A series whose range is below this share of its largest value is constant."""
+
+ALWAYS = ("ar1", "shuffle")
+"""Tests that are always made, besides the one of the assessment."""
 
 
 @dataclass(frozen=True)
@@ -37,6 +33,11 @@ class TrendOptions:
     minimum_years: int
     method: str = "ar1"
     level: float = 0.05
+
+    @property
+    def tests(self) -> tuple[str, ...]:
+        """The tests to make, by name (see `stook.trend.blocktest.block_test`)."""
+        return ALWAYS if self.method in ALWAYS else (*ALWAYS, self.method)
 
     @classmethod
     def of(cls, assessment: Assessment) -> TrendOptions:
@@ -59,16 +60,15 @@ class SeriesTrends:
         Unit of the series per year.
     lag1
         Lag-1 correlation of the residuals, corrected for bias; NaN for a straight line.
-    p_ar1, p_shuffle
-        Two-sided p-values against AR(1) surrogates and against shuffled years.
+    p
+        Two-sided p-values by test.
     """
 
     years: np.ndarray
     slope: np.ndarray
     theil_sen: np.ndarray
     lag1: np.ndarray
-    p_ar1: np.ndarray
-    p_shuffle: np.ndarray
+    p: dict[str, np.ndarray]
 
 
 @dataclass(frozen=True)
@@ -108,7 +108,11 @@ def series_trends(
     """
     series = values.shape[1]
     trends = SeriesTrends(
-        np.zeros(series, dtype=np.int64), *(np.full(series, np.nan) for _ in range(5))
+        years=np.zeros(series, dtype=np.int64),
+        slope=np.full(series, np.nan),
+        theil_sen=np.full(series, np.nan),
+        lag1=np.full(series, np.nan),
+        p={name: np.full(series, np.nan) for name in options.tests},
     )
     random = None
     if with_random:
@@ -131,9 +135,10 @@ def _store(
     columns: np.ndarray,
     result: dict[str, np.ndarray],
 ) -> None:
-    for field in fields(SeriesTrends):
-        if field.name in result:
-            getattr(trends, field.name)[columns] = result[field.name]
+    for name in ("slope", "theil_sen", "lag1"):
+        getattr(trends, name)[columns] = result[name]
+    for name, p in trends.p.items():
+        p[columns] = result[f"p_{name}"]
     if random is not None:
         random.slopes[:, columns] = result["random_slopes"]
         random.significant[:, columns] = result["random_significant"]
@@ -155,7 +160,7 @@ def _blocks(
         span = there[-1] - there[0] + 1
         if span - len(there) > LARGEST_GAP_SHARE * span:
             continue
-        drawn = randomisations(options.seed, there, options.count)
+        drawn = randomisations(options.seed, tuple(there.tolist()), options.count)
         for first in range(0, len(columns), BLOCK):
             yield rows, columns[first : first + BLOCK], drawn
 
@@ -164,86 +169,21 @@ def _block_trends(
     values: np.ndarray, drawn: Randomisations, options: TrendOptions, with_random: bool
 ) -> dict[str, np.ndarray]:
     """Return the trends of one block of complete series, ``(n, s) -> (s)`` each, per year."""
-    positions = drawn.years.astype(np.float64)
+    positions = np.array(drawn.years, dtype=np.float64)
     low, high = values.min(axis=0), values.max(axis=0)
     constant = high - low <= ROUNDING * np.maximum(np.abs(low), np.abs(high))
     values = np.where(constant, 0.0, values)
     slope, _ = kernels.linear_fit(values, positions)
-    shuffled = _Test.shuffled(values, drawn)
-    ar1, lag1 = _Test.ar1(values, drawn)
+    detrended = Detrended.of(values)
     result = {
         "slope": slope,
         "theil_sen": kernels.theil_sen(values, positions),
-        "lag1": lag1,
-        "p_shuffle": np.where(constant, 1.0, shuffled.probability()),
-        "p_ar1": np.where(constant, 1.0, ar1.probability()),
+        "lag1": detrended.lag1,
     }
-    if with_random:
-        test = ar1 if options.method == "ar1" else shuffled
-        result["random_slopes"] = np.concatenate([slope[None], test.slopes()])
-        result["random_significant"] = test.significant(options.level) & ~constant
+    for method in options.tests:
+        test = block_test(method, values, detrended, drawn)
+        result[f"p_{method}"] = np.where(constant, 1.0, test.probability())
+        if with_random and method == options.method:
+            result["random_slopes"] = np.concatenate([slope[None], test.slopes()])
+            result["random_significant"] = test.significant(options.level) & ~constant
     return result
-
-
-@dataclass(frozen=True)
-class _Test:
-    """Randomised against observed statistics of a block; larger in size is more of a trend.
-
-    Attributes
-    ----------
-    random, observed
-        float64, shapes (m, s) and (s,).
-    random_slopes
-        float64, shape (m, s); times `units`, shape (s,), it is in the unit of the series per year.
-    """
-
-    random: np.ndarray
-    observed: np.ndarray
-    random_slopes: np.ndarray
-    units: np.ndarray
-
-    @classmethod
-    def shuffled(cls, values: np.ndarray, drawn: Randomisations) -> _Test:
-        """Test slopes against those of shuffled years; exact whole numbers."""
-        weights = centred_weights(drawn.years)
-        integers, units = to_integers(values, weights)
-        random = drawn.shuffled_weights(weights) @ integers
-        centred = drawn.years - drawn.years.mean()
-        per_year = centred[-1] / weights[-1] / np.sum(centred**2)
-        return cls(random, weights @ integers, random, units * per_year)
-
-    @classmethod
-    def ar1(cls, values: np.ndarray, drawn: Randomisations) -> tuple[_Test, np.ndarray]:
-        """Test studentised slopes against AR(1) surrogates; also return the lag-1 correlation.
-
-        The years there are count as consecutive.
-        """
-        n = len(drawn.years)
-        steps = np.arange(n)
-        slopes, residuals = kernels.linear_fit(values, steps.astype(np.float64))
-        squares, products = kernels.residual_sums(residuals)
-        squares[squares <= (ROUNDING * np.abs(values).max(axis=0)) ** 2] = 0.0
-        lag1, observed = kernels.lag1_and_statistic(slopes, squares, products, n)
-        rho = np.nan_to_num(lag1)
-        weights = (2 * steps - (n - 1)).astype(np.float64)
-        integers, units = to_integers(kernels.innovations(residuals, rho), weights)
-        random_slopes = drawn.shuffled_weights(weights) @ integers
-        random = np.empty_like(random_slopes)
-        kernels.ar1_surrogates(integers, rho, drawn.orders, random_slopes, random)
-        return cls(random, observed, random_slopes, units * np.sqrt(n / (n - 2.0))), lag1
-
-    def probability(self) -> np.ndarray:
-        """Return two-sided p-values, shape (s,)."""
-        counts = kernels.count_as_large(self.random, self.observed)
-        return probability(counts, len(self.random))
-
-    def slopes(self) -> np.ndarray:
-        """Return the randomised slopes, shape (m, s), unit of the series per year."""
-        return self.random_slopes * self.units
-
-    def significant(self, level: float) -> np.ndarray:
-        """Judge observed (first) and randomised trends against all m + 1, shape (m + 1, s)."""
-        sizes = np.abs(np.concatenate([self.observed[None], np.nan_to_num(self.random)]))
-        largest = int(np.floor(level * len(sizes) + 1e-9))
-        critical = np.partition(sizes, len(sizes) - largest, axis=0)[len(sizes) - largest]
-        return (sizes >= critical) & (critical > 0)
