@@ -110,7 +110,8 @@ def block_test(
 
 def shuffled_test(values: np.ndarray, drawn: Randomisations) -> BlockTest:
     """Test slopes against those of shuffled years: right for independent years only."""
-    integers, units = to_integers(values, drawn.year_weights)
+    middle = values.min(axis=0) / 2 + values.max(axis=0) / 2
+    integers, units = to_integers(values - middle, drawn.year_weights)
     random = drawn.shuffled_years @ integers
     years = np.array(drawn.years) - np.mean(drawn.years)
     per_year = years[-1] / drawn.year_weights[-1] / np.sum(years**2)

@@ -142,13 +142,13 @@ def to_integers(values: np.ndarray, weights: np.ndarray) -> tuple[np.ndarray, np
 
     A sum of products of whole numbers below 2**53 in float64 is exact, so that a matrix product
     gives the same bits for a series in any block, order of summation, thread count and library;
-    and equal values stay exactly equal. The rounding is below 1e-7 of a series' range for 300
-    years.
+    and equal values stay exactly equal. The rounding is below 1e-7 of a series' largest value
+    for 300 years.
 
     Parameters
     ----------
     values
-        float64, shape (n, s), no missing values.
+        float64, shape (n, s), no missing values; about zero.
     weights
         Whole numbers, shape (..., n): those of the sums to come.
 
@@ -157,14 +157,12 @@ def to_integers(values: np.ndarray, weights: np.ndarray) -> tuple[np.ndarray, np
     integers
         float64, shape (n, s).
     units
-        float64, shape (s,): a power of two each; values are about ``centre + integers * unit``.
+        float64, shape (s,): a power of two each; values are about ``integers * unit``.
     """
-    low, high = values.min(axis=0), values.max(axis=0)
     room = float(np.abs(weights).max()) * weights.shape[-1]
     bits = SIGNIFICAND_BITS - 1 - int(np.ceil(np.log2(room)))
-    exponents = np.frexp(high - low)[1]
-    units = np.ldexp(1.0, exponents - bits)
-    return np.rint((values - low) / units) - np.rint((high - low) / units / 2.0), units
+    units = np.ldexp(1.0, np.frexp(np.abs(values).max(axis=0))[1] - bits)
+    return np.rint(values / units), units
 
 
 def probability(counts: np.ndarray, count: int) -> np.ndarray:
