@@ -13,6 +13,8 @@ import argparse
 import json
 
 import numpy as np
+from stook.trend.discovery import benjamini_hochberg, rate_for_level
+from stook.trend.field import Field
 from stook.trend.series import TrendOptions, series_trends
 
 LEVEL = 0.05
@@ -20,6 +22,12 @@ YEARS = (30, 60, 100)
 LAG1 = (-0.3, 0.0, 0.3, 0.6, 0.8, 0.9)
 CHECKED = (0.0, 0.3, 0.6)
 METHODS = ("ar1", "shuffle", "blocks", "phases")
+FIELD_TESTS = (
+    "area share",
+    "mean trend",
+    "any discovery on the map",
+    "10 of 100 pixels, taken as independent",
+)
 SLOPES = (0.0, 0.5, 1.0, 1.5, 2.0, 3.0)
 
 
@@ -91,11 +99,52 @@ def power(series: int, count: int) -> dict[tuple[str, float, float], float]:
     return found
 
 
+def fields(number: int, count: int, reach: float) -> dict[str, float]:
+    """Return the share of fields without a trend that the field tests call significant.
+
+    10 x 10 pixels, 60 years, lag-1 correlation 0.3, correlation falling as exp(-distance/reach);
+    a reach of 0 is independent pixels.
+    """
+    random = np.random.default_rng([77, int(reach)])
+    row, column = np.divmod(np.arange(100), 10)
+    distance = np.hypot(row[:, None] - row, column[:, None] - column)
+    mixing = np.linalg.cholesky(np.exp(-distance / reach)) if reach else np.eye(100)
+    options = TrendOptions(seed=1, count=count, minimum_years=20)
+    years = np.arange(60) + 1901
+    found: dict[str, list[bool]] = {name: [] for name in FIELD_TESTS}
+    for _ in range(number):
+        values = ar1_series(random, 60, 100, 0.3) @ mixing.T
+        trends, randomised = series_trends(values, years, options, with_random=True)
+        assert randomised is not None
+        sums = Field([], years, count)
+        sums.add(values, randomised, np.ones(100, dtype=np.int64), np.full(100, -1))
+        row_ = sums.table("x", "all", 1.0, 10.0, options).iloc[0]
+        found["area share"].append(row_["share_p"] <= LEVEL)
+        found["mean trend"].append(row_["mean_trend_p"] <= LEVEL)
+        found["any discovery on the map"].append(
+            bool(benjamini_hochberg(trends.p["ar1"], rate_for_level(LEVEL)).any())
+        )
+        # 10 of 100 independent tests at 5 %: P = 0.0282 (Livezey & Chen 1983).
+        found["10 of 100 pixels, taken as independent"].append((trends.p["ar1"] <= LEVEL).sum() > 9)
+    return {name: float(np.mean(marks)) for name, marks in found.items()}
+
+
+def print_fields(number: int, count: int) -> None:
+    """Print the level of the field tests."""
+    print(f"\nShare of {number} fields without a trend called significant, nominal 5 %, per cent")
+    columns = {f"reach {reach:g} pixels": fields(number, count, reach) for reach in (0, 3, 10)}
+    print("| test | " + " | ".join(columns) + " |")
+    print("|---|" + "---|" * len(columns))
+    for name in FIELD_TESTS:
+        print(f"| {name} |" + "".join(f" {100 * one[name]:.1f} |" for one in columns.values()))
+
+
 def main() -> None:
     """Print the tables and, with ``--json``, the keys."""
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--series", type=int, default=2000)
     parser.add_argument("--randomisations", type=int, default=999)
+    parser.add_argument("--fields", type=int, default=500)
     parser.add_argument("--json", action="store_true")
     given = parser.parse_args()
     found = levels(given.series, given.randomisations)
@@ -120,6 +169,7 @@ def main() -> None:
         for lag1 in CHECKED:
             cells = (f" {100 * powers[method, lag1, slope]:.0f} |" for slope in SLOPES)
             print(f"| {method} | {lag1:g} |" + "".join(cells))
+    print_fields(given.fields, given.randomisations)
     if given.json:
         print(json.dumps(keys(found)))
 

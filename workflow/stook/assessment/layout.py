@@ -129,6 +129,10 @@ class Layout:
         """Distribution of pixel trends and of randomised trends."""
         return self.root / "trend" / simulation / f"{crop}_{system}_distribution.parquet"
 
+    def trend_field(self, simulation: str, crop: str, system: str) -> Path:
+        """Field significance by region: area share significant, area-weighted mean trend."""
+        return self.root / "trend" / simulation / f"{crop}_{system}_field.parquet"
+
     def trend_regions(self, simulation: str) -> Path:
         """Slopes and p-values of regional yields."""
         return self.root / "trend" / simulation / "regions.parquet"

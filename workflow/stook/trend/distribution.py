@@ -13,6 +13,8 @@ HALF = 512
 WANTED_BINS = 40
 """Largest number of bins between the 1st and the 99th percentile of a finished table."""
 
+COLUMNS = ["quantity", "period", "kind", "bin_low", "bin_high", "area_share"]
+
 AREA_UNIT_HA = 0.001
 """Areas are counted in whole units of this, so that sums do not depend on their order."""
 
@@ -76,9 +78,8 @@ def distribution_table(
         values), area_share (sums to 1 for each kind); no rows if there was no value.
     """
     pair = {"observed": observed, "randomised": random}
-    columns = ["quantity", "period", "kind", "bin_low", "bin_high", "area_share"]
     if any(histogram.areas.sum() == 0 for histogram in pair.values()):
-        return pd.DataFrame(columns=columns)
+        return pd.DataFrame(columns=COLUMNS)
     exponent = max((h.exponent for h in pair.values() if h.exponent is not None), default=0)
     for histogram in pair.values():
         histogram.widen(exponent)
@@ -101,4 +102,4 @@ def distribution_table(
         )
         for kind, histogram in pair.items()
     ]
-    return pd.concat(parts, ignore_index=True)[columns]
+    return pd.concat(parts, ignore_index=True)[COLUMNS]

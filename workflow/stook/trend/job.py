@@ -5,7 +5,6 @@ from __future__ import annotations
 from contextlib import ExitStack
 
 import numpy as np
-import pandas as pd
 import xarray as xr
 
 from stook.assessment.layout import Layout
@@ -15,8 +14,10 @@ from stook.audit.ledger import Job
 from stook.grids.analysis import AnalysisGrid, tile_count
 from stook.grids.files import PIXEL_CHUNK, open_result, read_table
 from stook.season.definition import describe, unit_of
+from stook.trend.distribution import COLUMNS as DISTRIBUTION_COLUMNS
+from stook.trend.field import COLUMNS as FIELD_COLUMNS
 from stook.trend.periods import trend_periods
-from stook.trend.pixels import Domain, Quantity, map_trends
+from stook.trend.pixels import Domain, Quantity, join_tables, map_trends
 from stook.trend.regions import COLUMNS, regional_trends, regional_yields
 from stook.trend.series import TrendOptions
 
@@ -27,7 +28,7 @@ def pixels(assessment: Assessment, simulation: str, crop: str, system: str) -> N
     """Write the trend maps of one simulation, crop and system, and their distributions.
 
     Reads the season indices, the yields and the crop layers; writes
-    `Layout.trend_pixels` and `Layout.trend_distribution`.
+    `Layout.trend_pixels`, `Layout.trend_distribution` and `Layout.trend_field`.
     """
     layout = Layout.of(assessment)
     tiles = [
@@ -66,10 +67,10 @@ def pixels(assessment: Assessment, simulation: str, crop: str, system: str) -> N
         job.netcdf(
             _with_years(grids, periods), layout.trend_pixels(simulation, crop, system), title
         )
-        job.table(
-            pd.concat([one.distribution for one in found], ignore_index=True),
-            layout.trend_distribution(simulation, crop, system),
-        )
+        distribution = join_tables([one.distribution for one in found], DISTRIBUTION_COLUMNS)
+        job.table(distribution, layout.trend_distribution(simulation, crop, system))
+        field = join_tables([one.field for one in found], FIELD_COLUMNS)
+        job.table(field, layout.trend_field(simulation, crop, system))
 
 
 def regions(assessment: Assessment, simulation: str) -> None:
@@ -92,10 +93,7 @@ def regions(assessment: Assessment, simulation: str) -> None:
                     yields, crop, periods, assessment.periods.baseline, TrendOptions.of(assessment)
                 )
             )
-        tables = [table for table in tables if not table.empty]
-        empty = pd.DataFrame(columns=COLUMNS)
-        table = pd.concat(tables, ignore_index=True) if tables else empty
-        job.table(table, layout.trend_regions(simulation))
+        job.table(join_tables(tables, COLUMNS), layout.trend_regions(simulation))
 
 
 def _quantities(assessment: Assessment, crop: str, system: str) -> list[Quantity]:
@@ -108,7 +106,9 @@ def _quantities(assessment: Assessment, crop: str, system: str) -> list[Quantity
 
 def _domain(layers: xr.Dataset, crop: str, system: str) -> Domain:
     layer = layers.sel(crop_system=f"{crop}_{system}")
-    return Domain(layer["reason"].values, layer["area"].values, layers["main_region"].values)
+    names = [str(name) for name in layers["region"].values]
+    region = layers["main_region"].values
+    return Domain(layer["reason"].values, layer["area"].values, region, names)
 
 
 def _with_years(grids: xr.Dataset, periods: dict[str, tuple[int, int]]) -> xr.Dataset:

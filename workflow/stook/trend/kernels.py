@@ -318,3 +318,17 @@ def count_as_large(
         for i in range(observed.shape[0]):
             counts[i] += abs(random[j, i]) >= abs(observed[i])
     return counts
+
+
+@njit(cache=True, nogil=True)
+def area_sums(
+    values: np.ndarray, weights: np.ndarray, sums: np.ndarray
+) -> None:  # pragma: no cover - compiled
+    """Add weighted values to the sums of each year, pixel by pixel; ``(n, s), (s) -> (n)``.
+
+    The order of the pixels is that of the columns, so that a sum does not depend on how the
+    columns are cut into calls. A missing value makes the sum of its year missing.
+    """
+    for i in range(values.shape[1]):
+        for t in range(values.shape[0]):
+            sums[t] += weights[i] * values[t, i]

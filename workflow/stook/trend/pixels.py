@@ -11,7 +11,10 @@ import xarray as xr
 
 from stook.grids.missing import Reason, reason_attributes
 from stook.trend.discovery import UNKNOWN, rate_for_level, significant_in_families
-from stook.trend.distribution import Histogram, distribution_table, whole_areas
+from stook.trend.distribution import AREA_UNIT_HA, Histogram, distribution_table, whole_areas
+from stook.trend.distribution import COLUMNS as DISTRIBUTION_COLUMNS
+from stook.trend.field import COLUMNS as FIELD_COLUMNS
+from stook.trend.field import Field
 from stook.trend.periods import is_covered
 from stook.trend.series import RandomTrends, SeriesTrends, TrendOptions, series_trends
 
@@ -56,11 +59,14 @@ class Domain:
         Harvested area, ha (lat, lon).
     region
         int (lat, lon): number of the region a pixel is judged in, -1 for none.
+    names
+        Names of the regions.
     """
 
     reason: np.ndarray
     area: np.ndarray
     region: np.ndarray
+    names: list[str]
 
     @property
     def there(self) -> np.ndarray:
@@ -70,10 +76,11 @@ class Domain:
 
 @dataclass(frozen=True)
 class MapTrends:
-    """The trends of one quantity: grids (period, lat, lon) and the distribution table."""
+    """The trends of one quantity: grids (period, lat, lon) and tables."""
 
     grids: xr.Dataset
     distribution: pd.DataFrame
+    field: pd.DataFrame
 
 
 def map_trends(
@@ -105,24 +112,64 @@ def map_trends(
         Size of the largest arrays, MiB.
     """
     years = series["year"].values.astype(np.int64)
-    shape = (len(periods), *domain.there.shape)
-    found = _Grids.empty(shape, options.tests)
-    histograms = {name: (Histogram(), Histogram()) for name in periods}
+    covered = {name: ends for name, ends in periods.items() if is_covered(ends, years)}
+    maps = _Grids.empty((len(periods), *domain.there.shape), options.tests)
+    numbers = {name: k for k, name in enumerate(periods)}
+    parts = {name: _Period.of(years, ends, domain, options) for name, ends in covered.items()}
     for rows, columns, values in _bands(series, domain.there, options, block_mb):
         areas = whole_areas(domain.area[rows, columns])
-        for k, (name, (first, last)) in enumerate(periods.items()):
-            if not is_covered((first, last), years):
-                continue
-            inside = (years >= first) & (years <= last)
-            trends, random = series_trends(values[inside], years[inside], options, True)
+        for name, part in parts.items():
+            trends, random = series_trends(
+                values[part.inside], years[part.inside], options, with_random=True
+            )
             assert random is not None
-            found.store(k, rows, columns, trends)
-            _collect(histograms[name], random, areas)
-    tables = [distribution_table(quantity.name, name, *pair) for name, pair in histograms.items()]
+            maps.store(numbers[name], rows, columns, trends)
+            part.collect(values[part.inside], random, areas, domain.region[rows, columns])
+    distributions = [part.distribution(quantity.name, name) for name, part in parts.items()]
+    fields = [part.field_table(quantity.name, name, options) for name, part in parts.items()]
     return MapTrends(
-        found.dataset(quantity, domain, reason, list(periods), options),
-        pd.concat(tables, ignore_index=True),
+        maps.dataset(quantity, domain, reason, list(periods), options),
+        join_tables(distributions, DISTRIBUTION_COLUMNS),
+        join_tables(fields, FIELD_COLUMNS),
     )
+
+
+def join_tables(tables: list[pd.DataFrame], columns: list[str]) -> pd.DataFrame:
+    """Join tables of the same columns; no table, or only empty ones, give an empty one."""
+    filled = [table for table in tables if not table.empty]
+    return pd.concat(filled, ignore_index=True) if filled else pd.DataFrame(columns=columns)
+
+
+@dataclass
+class _Period:
+    """What is collected over the pixels in one period."""
+
+    inside: np.ndarray
+    observed: Histogram
+    random: Histogram
+    sums: Field
+
+    @classmethod
+    def of(
+        cls, years: np.ndarray, ends: tuple[int, int], domain: Domain, options: TrendOptions
+    ) -> _Period:
+        inside = (years >= ends[0]) & (years <= ends[1])
+        sums = Field(domain.names, years[inside], options.count)
+        return cls(inside, Histogram(), Histogram(), sums)
+
+    def collect(
+        self, values: np.ndarray, random: RandomTrends, areas: np.ndarray, region: np.ndarray
+    ) -> None:
+        slopes = random.slopes * YEARS_PER_DECADE
+        self.observed.add(slopes[:1], areas)
+        self.random.add(slopes[1:], areas)
+        self.sums.add(values, random, areas, region)
+
+    def distribution(self, quantity: str, period: str) -> pd.DataFrame:
+        return distribution_table(quantity, period, self.observed, self.random)
+
+    def field_table(self, quantity: str, period: str, options: TrendOptions) -> pd.DataFrame:
+        return self.sums.table(quantity, period, AREA_UNIT_HA, YEARS_PER_DECADE, options)
 
 
 def _bands(
@@ -141,13 +188,6 @@ def _bands(
             part = slice(first, first + most)
             block = values[:, rows[part], columns[part]].astype(np.float64)
             yield rows[part] + top, columns[part], block
-
-
-def _collect(pair: tuple[Histogram, Histogram], random: RandomTrends, areas: np.ndarray) -> None:
-    observed, randomised = pair
-    slopes = random.slopes * YEARS_PER_DECADE
-    observed.add(slopes[:1], areas)
-    randomised.add(slopes[1:], areas)
 
 
 @dataclass
