@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from stook.audit.plain.trend import trend_of_series
+from stook.audit.plain.trend import break_of_series, trend_of_series
+from stook.trend.breakpoint import find_break
+from stook.trend.randomise import randomisations
 from stook.trend.series import TrendOptions, series_trends
 
 SEED, COUNT, MINIMUM = 23, 199, 20
@@ -48,3 +50,13 @@ def test_same_as_the_plain_path(n: int) -> None:
         np.testing.assert_array_equal(trends.p["shuffle"][i], plain.p_shuffle)
         np.testing.assert_array_equal(found["blocks"].p["blocks"][i], plain.p_blocks)
         np.testing.assert_array_equal(found["phases"].p["phases"][i], plain.p_phases)
+
+
+def test_same_break_as_the_plain_path() -> None:
+    years = np.arange(60) + 1950
+    drawn = randomisations(SEED, tuple(years.tolist()), 99)
+    for i in (0, 1, 2, 10, 11):
+        values = random_series(60)[:, i] + 0.04 * i * np.clip(years - 1985, 0, None)
+        found = find_break(values, drawn)
+        assert found is not None
+        assert (found.year, found.p) == break_of_series(values, years, SEED, 99)

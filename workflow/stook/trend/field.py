@@ -126,7 +126,7 @@ class Field:
                     "share_significant": shares[0],
                     "share_random_mean": shares[1:].mean(),
                     "share_random_p95": np.percentile(shares[1:], 95),
-                    "share_p": probability(np.array(as_large), self.count),
+                    "share_p": probability(int(as_large), self.count),
                 }
             )
         return pd.DataFrame(rows, columns=COLUMNS)

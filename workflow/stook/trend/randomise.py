@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from functools import cached_property, lru_cache
+from typing import Any
 
 import numpy as np
 
@@ -165,9 +166,14 @@ def to_integers(values: np.ndarray, weights: np.ndarray) -> tuple[np.ndarray, np
     return np.rint(values / units), units
 
 
-def probability(counts: np.ndarray, count: int) -> np.ndarray:
+def probability(counts: Any, count: int) -> Any:
     """Return ``p = (b + 1) / (m + 1)`` for b randomised trends of m as large as the observed.
 
-    Phipson & Smyth 2010, Stat. Appl. Genet. Mol. Biol. 9:39.
+    A number, or an array of them. Phipson & Smyth 2010, Stat. Appl. Genet. Mol. Biol. 9:39.
+
+    Examples
+    --------
+    >>> probability(0, 999)
+    0.001
     """
     return (counts + 1.0) / (count + 1.0)

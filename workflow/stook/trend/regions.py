@@ -8,9 +8,10 @@ import numpy as np
 import pandas as pd
 
 from stook.constants import CENTRAL_DRAW
+from stook.trend.breakpoint import find_break
 from stook.trend.periods import is_covered
 from stook.trend.pixels import YEARS_PER_DECADE
-from stook.trend.series import TrendOptions, series_trends
+from stook.trend.series import TrendOptions, draw, series_trends
 
 COLUMNS = [
     "crop",
@@ -24,6 +25,10 @@ COLUMNS = [
     "lag1",
     "p_ar1",
     "p_shuffle",
+    "break_year",
+    "slope_before",
+    "slope_after",
+    "p_break",
 ]
 
 
@@ -71,7 +76,9 @@ def regional_trends(
     -------
     DataFrame
         Columns `COLUMNS`: slope and theil_sen in t/ha per decade, slope_percent in percent of the
-        baseline mean per decade; NaN where there are too few years.
+        baseline mean per decade; the best single change of slope (`find_break`), its year,
+        slopes and p-value; NaN where there are too few years. The p-values of a further test of
+        the options stand last.
     """
     years = yields.index.to_numpy().astype(np.int64)
     base = yields[(years >= baseline[0]) & (years <= baseline[1])].mean().to_numpy()
@@ -92,6 +99,22 @@ def regional_trends(
             theil_sen=YEARS_PER_DECADE * trends.theil_sen,
             lag1=trends.lag1,
             **{f"p_{test}": p for test, p in trends.p.items()},
+            **_breaks(values, years[inside], options),
         )
         parts.append(part[[*COLUMNS, *(c for c in part if c not in COLUMNS)]])
     return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=COLUMNS)
+
+
+def _breaks(values: np.ndarray, years: np.ndarray, options: TrendOptions) -> dict[str, np.ndarray]:
+    """Return the change of slope of every series (n, s), slopes per decade."""
+    names = ("break_year", "slope_before", "slope_after", "p_break")
+    result = {name: np.full(values.shape[1], np.nan) for name in names}
+    for i, series in enumerate(values.T):
+        there = np.isfinite(series)
+        drawn = draw(years[there], options)
+        found = find_break(series[there], drawn) if drawn is not None else None
+        if found is not None:
+            slopes = YEARS_PER_DECADE * found.before, YEARS_PER_DECADE * found.after
+            for name, value in zip(names, (found.year, *slopes, found.p), strict=True):
+                result[name][i] = value
+    return result

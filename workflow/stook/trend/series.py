@@ -144,6 +144,16 @@ def _store(
         random.significant[:, columns] = result["random_significant"]
 
 
+def draw(years: np.ndarray, options: TrendOptions) -> Randomisations | None:
+    """Return the randomisations for the years a series has, or None if they are too few."""
+    if len(years) < options.minimum_years:
+        return None
+    span = years[-1] - years[0] + 1
+    if span - len(years) > LARGEST_GAP_SHARE * span:
+        return None
+    return randomisations(options.seed, tuple(years.tolist()), options.count)
+
+
 def _blocks(
     values: np.ndarray, years: np.ndarray, options: TrendOptions
 ) -> Iterator[tuple[np.ndarray, np.ndarray, Randomisations]]:
@@ -154,13 +164,9 @@ def _blocks(
     for k in range(patterns.shape[1]):
         columns = np.flatnonzero(which == k)
         rows = valid[:, columns[0]]
-        there = np.asarray(years)[rows]
-        if len(there) < options.minimum_years:
+        drawn = draw(np.asarray(years)[rows], options)
+        if drawn is None:
             continue
-        span = there[-1] - there[0] + 1
-        if span - len(there) > LARGEST_GAP_SHARE * span:
-            continue
-        drawn = randomisations(options.seed, tuple(there.tolist()), options.count)
         for first in range(0, len(columns), BLOCK):
             yield rows, columns[first : first + BLOCK], drawn
 

@@ -50,9 +50,7 @@ def trend_of_series(
     if n < minimum_years or 1 - n / (year[-1] - year[0] + 1) > _GAP:
         return PlainTrend(0, *[float("nan")] * 7)
     slope, _ = fit_line(year, y)
-    pairs = [
-        (y[b] - y[a]) / (year[b] - year[a]) for a in range(n) for b in range(a + 1, n)
-    ]
+    pairs = [(y[b] - y[a]) / (year[b] - year[a]) for a in range(n) for b in range(a + 1, n)]
     middle = float(np.median(pairs))
     if y.max() - y.min() <= 1e-10 * np.abs(y).max():
         return PlainTrend(n, 0.0, 0.0, float("nan"), 1.0, 1.0, 1.0, 1.0)
@@ -81,6 +79,33 @@ def trend_of_series(
         p_blocks=p_value([spread * one for one in blocks], step_slope),
         p_phases=p_value([spread * one for one in phases], step_slope),
     )
+
+
+def break_of_series(
+    values: np.ndarray, years: np.ndarray, seed: int, randomisations: int
+) -> tuple[int, float]:
+    """Return the last year of the first slope of the best broken line, and its p-value.
+
+    Takes a complete series; see `trend_of_series` for the parameters.
+    """
+    step, statistic, rho, rest = _best_bend(values)
+    random = [_best_bend(series)[1] for series in _ar1_series(seed, rest, rho, randomisations)]
+    return int(years[step]), p_value(random, statistic)
+
+
+def _best_bend(y: np.ndarray) -> tuple[int, float, float, np.ndarray]:
+    """Try a bend at every step with ten years on either side; keep the best fit."""
+    n = len(y)
+    x = np.arange(n)
+    straight = np.sum(fit_line(x, y)[1] ** 2)
+    best, squares, rest = 0, np.inf, y
+    for step in range(9, n - 10):
+        design = np.stack([np.ones(n), x, np.clip(x - step, 0, None)], axis=1)
+        residuals = y - design @ np.linalg.lstsq(design, y, rcond=None)[0]
+        if np.sum(residuals**2) < squares:
+            best, squares, rest = step, float(np.sum(residuals**2)), residuals
+    rho = lag1_correlation(rest)
+    return best, float((straight - squares) / squares * (1 - rho) / (1 + rho)), rho, rest
 
 
 def fit_line(x: np.ndarray, y: np.ndarray) -> tuple[float, np.ndarray]:
