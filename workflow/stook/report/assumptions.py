@@ -153,4 +153,5 @@ def _response_text(crop: str, system: str, response: Response) -> ResponseText:
         "log": "log: terms add up to the logarithm of yield",
         "level": "level: terms add up to yield, t/ha",
     }[response.link]
-    return ResponseText(crop, system, link, terms, ranges, response.citation, response.note)
+    citation, note = response.citation.strip().rstrip("."), response.note.strip()
+    return ResponseText(crop, system, link, terms, ranges, citation, note)

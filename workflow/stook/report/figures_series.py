@@ -132,6 +132,8 @@ def series_figure(
     rows = in_regions(combined(yearly[yearly["crop"] == crop]))
     order = [OBSERVED, *scenarios]
     rows = in_order(rows, region=regions, scenario=order, year=sorted(rows["year"].unique()))
+    first_year, last_year = rows["year"].min(), rows["year"].max()
+    periods = {k: v for k, v in periods.items() if v[0] <= last_year and v[1] >= first_year}
     with drawing_settings():
         columns = 3 if len(regions) <= 12 else 5
         figure, axes = panels(len(regions), columns, 1.9 if columns == 3 else 1.35)

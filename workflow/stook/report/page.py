@@ -120,6 +120,8 @@ def _headline(crop: str, rows: pd.DataFrame) -> Table:
     low, high = float(ends.min()), float(ends.max())
     rows = rows.assign(share=likelihood_share(rows))
     systems = ", all water systems" if (rows["system"] == "all").all() else ""
+    one_count = len(set(rows["models"])) == 1
+    counted = f"{rows['models'].iloc[0]:g} " if one_count else ""
     body: list[list[Any]] = []
     for region, group in rows.groupby("region", sort=False):
         for number, (_, row) in enumerate(group.iterrows()):
@@ -131,7 +133,7 @@ def _headline(crop: str, rows: pd.DataFrame) -> Table:
                 f"{signed(row['change_p05'])} to {signed(row['change_p95'])}",
                 range_glyph(row, low, high),
                 _likelihood(row),
-                f"{percent(row['agreement'])} of {row['models']:g}",
+                percent(row["agreement"]) + ("" if one_count else f" of {row['models']:g}"),
                 percent(row["extrapolated_share"]),
                 f"{unit.show(row['baseline_production_t'])} \N{RIGHTWARDS ARROW} "
                 f"{unit.show(row['horizon_production_t'])}",
@@ -147,7 +149,7 @@ def _headline(crop: str, rows: pd.DataFrame) -> Table:
             "5-95 % range, %",
             f"Range, {signed(low, 0)} to {signed(high, 0)} %",
             "Likelihood (share of members)",
-            "Agreement of models",
+            f"Agreement of {counted}models",
             "Outside estimation range",
             f"Production, {unit.name}",
         ],
@@ -161,7 +163,7 @@ def _likelihood(row: pd.Series) -> str:
     share = float(row["share"])
     if not isinstance(row["likelihood"], str) or not np.isfinite(share):
         return "n/a"
-    return f"{row['likelihood_of']} {row['likelihood']} ({percent(share)})"
+    return f"{row['likelihood_of']}: {row['likelihood']} ({percent(share)})"
 
 
 def range_glyph(row: Mapping[str, Any] | pd.Series, low: float, high: float) -> Markup:

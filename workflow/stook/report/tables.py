@@ -101,13 +101,16 @@ def _sentence(group: pd.DataFrame) -> str:
     if len(group) == 1:
         text = (
             f"median yield change {signed(low['change_p50'])} % in {low['region']} "
-            f"(5-95 % range {signed(low['change_p05'])} to {signed(low['change_p95'])} %)."
+            f"(5-95 % range {signed(low['change_p05'])} to {signed(low['change_p95'])} %); a "
+            f"decrease in {percent(low['share_decrease'])} of members."
         )
-    else:
-        text = (
-            f"median yield change from {signed(low['change_p50'])} % ({low['region']}) to "
-            f"{signed(high['change_p50'])} % ({high['region']})."
-        )
+        if low["models"] > 1:
+            text += f" {percent(low['agreement'])} of models agree on the sign."
+        return text
+    text = (
+        f"median yield change from {signed(low['change_p50'])} % ({low['region']}) to "
+        f"{signed(high['change_p50'])} % ({high['region']})."
+    )
     for direction, share in (
         ("decrease", group["share_decrease"]),
         ("increase", 1 - group["share_decrease"]),
@@ -116,7 +119,7 @@ def _sentence(group: pd.DataFrame) -> str:
         if count:
             text += (
                 f" {direction.capitalize()} in at least 66 % of members in {count} of "
-                f"{len(group)} {'region' if len(group) == 1 else 'regions'}."
+                f"{len(group)} regions."
             )
     agreeing = int((group["agreement"] >= AGREEMENT).sum())
     if group["models"].max() > 1:
