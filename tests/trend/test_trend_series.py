@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import dask
 import numpy as np
 import pytest
-from stook.trend.series import BLOCK, TrendOptions, series_trends
+from stook.trend.series import BLOCK, TrendOptions, draw, series_trends
 
 OPTIONS = TrendOptions(seed=2, count=99, minimum_years=20)
 YEARS = np.arange(50) + 1971
@@ -137,3 +139,31 @@ def test_seed_changes_p_values() -> None:
     values = many_series(12)
     other = TrendOptions(seed=3, count=99, minimum_years=20)
     assert (everything(values)["ar1"] != everything(values, other)["ar1"]).any()
+
+
+def test_randomised_slopes_are_those_of_randomised_series() -> None:
+    """In the unit of the series per year, whatever the test."""
+    values = 1e-3 * many_series(9)[:, [4, 5, 7]] - 17.0
+    gaps = values.copy()
+    gaps[[20, 33]] = np.nan
+    for given in (values, gaps):
+        there = np.isfinite(given[:, 0])
+        drawn = draw(YEARS[there], OPTIONS)
+        assert drawn is not None
+        _, random = series_trends(given, YEARS, replace(OPTIONS, method="shuffle"), True)
+        assert random is not None
+        complete = given[there]
+        for j in (0, 50, 98):
+            fit = np.polyfit(YEARS[there] - 1990.0, complete[drawn.orders[j]], 1)
+            np.testing.assert_allclose(random.slopes[j + 1], fit[0], rtol=1e-6, atol=1e-9)
+    for method in ("ar1", "blocks", "phases"):
+        noise = np.random.default_rng(2).standard_normal((50, 100))
+        options = TrendOptions(seed=2, count=400, minimum_years=20, method=method)
+        _, random = series_trends(noise, YEARS, options, True)
+        assert random is not None
+        # Standard deviation of the slope of 50 independent values: sqrt(12 / (50 (50^2 - 1))).
+        # Phases lose a tenth of it, as the fit of a line takes from the lowest frequency.
+        expected = np.sqrt(12 / (50 * (50**2 - 1)))
+        assert random.slopes[1:].std() == pytest.approx(expected, rel=0.12)
+        line, _ = series_trends(noise, YEARS, options)
+        np.testing.assert_array_equal(random.slopes[0], line.slope)
