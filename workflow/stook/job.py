@@ -3,23 +3,27 @@
 It calls the function NAME of ``stook.<stage>.job`` with the assessment of the results folder and
 the wildcards. A rule called ``correct_tile`` is thus ``stook.correct.job.tile``. The command is
 printed in every log, so that one job can be repeated by hand.
+
+Heavy modules are imported only after the watch on the parent has begun.
 """
 
 from __future__ import annotations
 
-import argparse
-import importlib
 import os
-import sys
 import threading
 import time
 
-from stook.assessment.load import load_resolved
-from stook.errors import StookError
+_PARENT = os.getppid()
+"""The process that started this one, noted before anything else."""
 
 
 def main(arguments: list[str] | None = None) -> int:
     """Run one job; return its exit status."""
+    import argparse
+    import shlex
+    import signal
+    import sys
+
     parser = argparse.ArgumentParser(prog="python -m stook.job", description=__doc__)
     parser.add_argument("stage")
     parser.add_argument("name")
@@ -29,17 +33,32 @@ def main(arguments: list[str] | None = None) -> int:
     given = parser.parse_intermixed_args(arguments)
     wildcards = dict(text.split("=", 1) for text in given.wildcards)
     _end_with_parent()
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
+    print(f"python -m stook.job {shlex.join(arguments or sys.argv[1:])}", flush=True)
+
+    from stook.errors import StookError
+
     try:
         run_job(given.stage, given.name, given.results, wildcards, given.threads)
     except StookError as error:
-        print(f"error: {error}", file=sys.stderr)
+        print(f"error: {' '.join(str(error).splitlines())}", file=sys.stderr)
         return 1
+    except MemoryError:
+        print("error: out of memory; lower store.block_mb or use fewer cores", file=sys.stderr)
+        return 1
+    except KeyboardInterrupt:
+        print("error: interrupted", file=sys.stderr)
+        return 130
     return 0
 
 
 def run_job(stage: str, name: str, results: str, wildcards: dict[str, str], threads: int) -> None:
     """Call the function of a job with Dask limited to the given threads."""
+    import importlib
+
     import dask
+
+    from stook.assessment.load import load_resolved
 
     function = getattr(importlib.import_module(f"stook.{stage}.job"), name)
     with dask.config.set(scheduler="threads", num_workers=threads):
@@ -48,10 +67,9 @@ def run_job(stage: str, name: str, results: str, wildcards: dict[str, str], thre
 
 def _end_with_parent() -> None:
     """End this process when the process that started it is gone, however it ended."""
-    parent = os.getppid()
 
     def watch() -> None:
-        while os.getppid() == parent:
+        while os.getppid() == _PARENT:
             time.sleep(0.5)
         os._exit(1)
 
@@ -59,4 +77,4 @@ def _end_with_parent() -> None:
 
 
 if __name__ == "__main__":
-    sys.exit(main())
+    raise SystemExit(main())

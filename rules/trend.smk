@@ -1,0 +1,44 @@
+rule trend_pixels:
+    input:
+        seasons=PLAN.seasons,
+        yields=PLAN.yields,
+        layers=LAYOUT.layers,
+    output:
+        grids=LAYOUT.trend_pixels("{simulation}", "{crop}", "{system}"),
+        distribution=LAYOUT.trend_distribution("{simulation}", "{crop}", "{system}"),
+        field=LAYOUT.trend_field("{simulation}", "{crop}", "{system}"),
+    log:
+        "logs/trend/pixels_{simulation}_{crop}_{system}.log",
+    benchmark:
+        "logs/trend/pixels_{simulation}_{crop}_{system}.tsv"
+    conda:
+        "environment.yaml"
+    threads: PLAN.threads(workflow.cores)
+    resources:
+        mem_mb=lambda wildcards, threads: PLAN.memory("trend_pixels", threads),
+    params:
+        fingerprint=PLAN.fingerprint("trend_pixels"),
+    shell:
+        'exec "$STOOK_PYTHON" -m stook.job trend pixels --results . --threads {threads} '
+        "simulation={wildcards.simulation:q} crop={wildcards.crop} system={wildcards.system} > {log:q} 2>&1"
+
+
+rule trend_regions:
+    input:
+        totals=PLAN.totals,
+    output:
+        table=LAYOUT.trend_regions("{simulation}"),
+    log:
+        "logs/trend/regions_{simulation}.log",
+    benchmark:
+        "logs/trend/regions_{simulation}.tsv"
+    conda:
+        "environment.yaml"
+    threads: 1
+    resources:
+        mem_mb=lambda wildcards, threads: PLAN.memory("trend_regions", threads),
+    params:
+        fingerprint=PLAN.fingerprint("trend_regions"),
+    shell:
+        'exec "$STOOK_PYTHON" -m stook.job trend regions --results . --threads {threads} '
+        "simulation={wildcards.simulation:q} > {log:q} 2>&1"

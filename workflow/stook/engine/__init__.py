@@ -1,0 +1,1 @@
+"""The engine: which jobs an assessment needs, and running them with Snakemake."""
