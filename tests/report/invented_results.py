@@ -21,6 +21,8 @@ from stook.assessment.schema import Assessment
 from stook.audit.ledger import Job
 from stook.constants import OBSERVED, OUTSIDE
 from stook.grids.analysis import AnalysisGrid, analysis_grid, tile_count
+from stook.trend.field import COLUMNS as FIELD_COLUMNS
+from stook.trend.field import EVERYWHERE
 
 
 def invent(folder: Path, world: World | None = None) -> Assessment:
@@ -182,7 +184,7 @@ class _Maker:
                 (yearly, self.layout.yearly, YEARLY),
             ):
                 job.table(pd.DataFrame(given, columns=columns), path)
-        if self.world.models:
+        if self.world.models and self.world.observed:
             self._evaluation()
 
     def _series(
@@ -314,10 +316,12 @@ class _Maker:
                             p = float(self.random.uniform(0.001, 1))
                             rows.append([crop, system, region, period, 30, -0.12, -2.4, -0.11])
                             rows[-1] += [float(self.random.normal(0.1, 0.2)), p, min(1.0, p * 0.7)]
+                            rows[-1] += [2006.0, -0.05, -0.2, 0.31]
             with self.job("trend_regions") as job:
                 job.table(pd.DataFrame(rows, columns=TRENDS), self.layout.trend_regions(simulation))
             for crop, system in self.assessment.systems:
                 self._distribution(simulation, crop, system, periods)
+                self._field(simulation, crop, system, periods)
                 self._trend_pixels(simulation, crop, system, periods)
 
     def _distribution(self, simulation: str, crop: str, system: str, periods: list[str]) -> None:
@@ -337,6 +341,17 @@ class _Maker:
         with self.job("trend_pixels") as job:
             path = self.layout.trend_distribution(simulation, crop, system)
             job.table(pd.DataFrame(rows, columns=columns), path)
+
+    def _field(self, simulation: str, crop: str, system: str, periods: list[str]) -> None:
+        rows = [
+            [quantity, period, region, 60, 1e5, -0.1, 0.2, 0.03, 0.5, 0.05, 0.11, 0.002]
+            for quantity in [*INDICES, "yield"]
+            for period in (periods if self.world.trend_rows else [])
+            for region in [*self.world.shown, EVERYWHERE]
+        ]
+        with self.job("trend_pixels") as job:
+            path = self.layout.trend_field(simulation, crop, system)
+            job.table(pd.DataFrame(rows, columns=FIELD_COLUMNS), path)
 
     def _trend_pixels(self, simulation: str, crop: str, system: str, periods: list[str]) -> None:
         shape = (len(periods), *self.grid.shape)

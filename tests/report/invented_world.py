@@ -162,5 +162,5 @@ YEARLY = [
 ]
 TRENDS = [
     *("crop", "system", "region", "period", "years", "slope", "slope_percent", "theil_sen"),
-    *("lag1", "p_ar1", "p_shuffle"),
+    *("lag1", "p_ar1", "p_shuffle", "break_year", "slope_before", "slope_after", "p_break"),
 ]

@@ -13,7 +13,7 @@ from read_page import Reader
 from stook.assessment.layout import Layout
 from stook.assessment.load import assessment_digest
 from stook.assessment.schema import Assessment
-from stook.report.page import range_glyph
+from stook.report.rows import range_glyph
 from stook.version import VERSION
 
 

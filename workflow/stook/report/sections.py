@@ -6,13 +6,14 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
+import pandas as pd
 import xarray as xr
 
 from stook.assessment.variables import system_indices
 from stook.constants import OBSERVED
 from stook.grids.files import open_result, read_table
 from stook.report import assumptions, tables
-from stook.report import page as pages
+from stook.report import rows as written
 from stook.report.figures_correct import WHOLE_YEAR, correction_figure
 from stook.report.figures_drivers import drivers_figure, effects_in_percent
 from stook.report.figures_maps import change_maps
@@ -30,6 +31,7 @@ from stook.report.reading import (
 )
 from stook.report.source import BASELINE, Source
 from stook.season.definition import describe, unit_of
+from stook.trend.field import EVERYWHERE
 
 _CHANGE_BANDS = (
     *("change_p50", "change_p05", "change_p17", "change_p83", "change_p95", "change_mean"),
@@ -47,8 +49,8 @@ def add_results(source: Source, page: Page, publisher: Publisher) -> None:
         return
     page.has_changes = True
     page.lead = tables.main_findings(source.changes, list(source.horizons)[-1])
-    page.headline = pages.headline_tables(source.changes)
-    if note := pages.outside_note(source.changes):
+    page.headline = written.headline_tables(source.changes)
+    if note := written.outside_note(source.changes):
         page.notes.append(note)
     for crop in source.changes["crop"].unique():
         drawing = range_figure(
@@ -127,7 +129,7 @@ def add_drivers(source: Source, page: Page, publisher: Publisher) -> None:
             page.drivers.append(publisher.drawing(drawing, parents))
         else:
             changes = tables.index_changes(means, BASELINE, horizon)
-            page.driver_tables.append(pages.index_table(changes, horizon, _index_words(source)))
+            page.driver_tables.append(written.index_table(changes, horizon, _index_words(source)))
 
 
 def _parents(source: Source, kind: str, simulations: Sequence[str]) -> list[Path]:
@@ -160,15 +162,35 @@ def add_trends(source: Source, page: Page, publisher: Publisher) -> None:
     shown = source.trends[source.trends["simulation"] == names[0]]
     shown = tables.in_regions(tables.combined(shown))
     what = "under observed weather" if names[0] == OBSERVED else f"of {names[0]}"
-    page.trend_tables.append(pages.trend_table(shown, f"Regional yield trends {what}"))
+    page.trend_tables.append(written.trend_table(shown, f"Regional yield trends {what}"))
     if len(names) > 1:
         summary = tables.trend_summary(source.trends, f"p_{spec.method}", spec.level)
-        page.trend_tables.append(pages.trend_summary_table(summary, spec.level))
+        page.trend_tables.append(written.trend_summary_table(summary, spec.level))
+    if not (fields := _fields(source, names[0])).empty:
+        page.trend_tables.insert(0, written.field_table(fields, _units(source)))
     with open_result(layout.layers) as layers:
         area = layers["area"].load()
     for crop, system in source.assessment.systems:
         own = area.sel(crop_system=f"{crop}_{system}")
         _add_distributions(source, page, publisher, crop, system, own)
+
+
+def _fields(source: Source, simulation: str) -> pd.DataFrame:
+    """Return the field significance of one series over all pixels of each crop and system."""
+    parts = []
+    for crop, system in source.assessment.systems:
+        field = read_table(source.layout.trend_field(simulation, crop, system))
+        parts.append(field[field["region"] == EVERYWHERE].assign(crop=crop, system=system))
+    return pd.concat(parts, ignore_index=True)
+
+
+def _units(source: Source) -> dict[tuple[str, str, str], str]:
+    units = {}
+    for crop, system in source.assessment.systems:
+        for name, definition in system_indices(source.assessment, crop, system).items():
+            units[crop, system, name] = unit_of(definition)
+        units[crop, system, "yield"] = "t/ha"
+    return units
 
 
 def _add_distributions(
@@ -180,8 +202,9 @@ def _add_distributions(
     grid = layout.trend_pixels(first, crop, system)
     distribution = read_table(layout.trend_distribution(first, crop, system))
     if not distribution.empty:
-        definitions = system_indices(source.assessment, crop, system)
-        units = {name: unit_of(given) for name, given in definitions.items()} | {"yield": "t/ha"}
+        units = {
+            name: unit for (*pair, name), unit in _units(source).items() if pair == [crop, system]
+        }
         drawing = trend_figure(
             distribution,
             f"trend_{crop}_{system}_{first}",
@@ -228,7 +251,7 @@ def add_correction(source: Source, page: Page, publisher: Publisher) -> None:
     publisher.table("evaluation", source.evaluation, parents, "correction before and after")
     page.correction.append(publisher.drawing(correction_figure(source.evaluation), parents))
     whole_year = source.evaluation[source.evaluation["season"] == WHOLE_YEAR]
-    page.correction_tables.append(pages.correction_table(whole_year))
+    page.correction_tables.append(written.correction_table(whole_year))
 
 
 def add_assumptions(source: Source, page: Page) -> None:

@@ -100,7 +100,7 @@ def read_source(assessment: Assessment) -> Source:
         read_table(layout.changes),
         yearly,
         pd.concat(trends, ignore_index=True),
-        read_table(layout.evaluation_table) if layout.evaluation_table.exists() else None,
+        read_table(layout.evaluation_table) if _evaluated(series) else None,
     )
     return Source(
         **source.__dict__
@@ -118,6 +118,11 @@ def read_source(assessment: Assessment) -> Source:
             "trends": in_order(source.trends, crop=crops, simulation=names, region=regions),
         }
     )
+
+
+def _evaluated(series: list[Simulation]) -> bool:
+    """Tell whether there was a reference to evaluate the correction of a simulation with."""
+    return series[0].name == OBSERVED and len(series) > 1
 
 
 def _polygons(assessment: Assessment) -> gpd.GeoDataFrame:
