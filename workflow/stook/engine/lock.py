@@ -34,9 +34,9 @@ def run_lock(root: Path) -> Iterator[None]:
             fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except BlockingIOError:
             file.seek(0)
+            holder = file.read().strip() or "unknown"
             raise ResultsError(
-                f"{root}: another run is working here (process {file.read().strip() or 'unknown'}); "
-                "wait for it or end it"
+                f"{root}: another run is working here (process {holder}); wait for it or end it"
             ) from None
         file.truncate(0)
         file.write(str(os.getpid()))

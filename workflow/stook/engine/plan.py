@@ -32,7 +32,8 @@ RELATIVE = Layout(Path())
 class Wildcards(Protocol):
     """The wildcards of a job, as attributes."""
 
-    def get(self, name: str, default: Any = None) -> Any: ...
+    def get(self, name: str, default: Any = None) -> Any:
+        """Return the value of a wildcard."""
 
 
 class Plan:

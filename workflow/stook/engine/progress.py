@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections import Counter
+from collections import Counter, defaultdict
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -42,7 +42,7 @@ class State:
     clock: Callable[[], float] = time.monotonic
     wanted: Counter[str] = field(default_factory=Counter)
     done: Counter[str] = field(default_factory=Counter)
-    seconds: Counter[str] = field(default_factory=Counter)
+    seconds: defaultdict[str, float] = field(default_factory=lambda: defaultdict(float))
     running: dict[int, tuple[str, float]] = field(default_factory=dict)
     jobs: dict[int, Planned] = field(default_factory=dict)
     failures: list[Failure] = field(default_factory=list)
@@ -194,10 +194,11 @@ class Display:
                 )
         left = self.state.seconds_left
         words = "" if left is None or done == total else f"about {duration(left)} left"
-        values = {"stage": self.state.stage, "left": words}
         if self._task is None:
-            self._task = self._progress.add_task("", total=total, **values)
-        self._progress.update(self._task, total=total, completed=done, **values)
+            self._task = self._progress.add_task("", total=total, stage="", left="")
+        self._progress.update(
+            self._task, total=total, completed=done, stage=self.state.stage, left=words
+        )
 
 
 def last_error(log: Path) -> str:

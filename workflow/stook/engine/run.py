@@ -73,9 +73,14 @@ def run(plan: Plan, request: Request, console: Console) -> int:
     folder.mkdir(exist_ok=True)
     stamp = datetime.datetime.now().strftime("%Y%m%dT%H%M%S")
     path = folder / f"run-{stamp}.log"
-    with run_lock(plan.root), path.open("w", encoding="utf-8") as log:
-        with Display(console, state) as display, _ending_jobs() as interrupted:
-            finished = _snakemake(plan, request, state, display, log, dry_run=False)
+    finished = False
+    with (
+        run_lock(plan.root),
+        path.open("w", encoding="utf-8") as log,
+        Display(console, state) as display,
+        _ending_jobs() as interrupted,
+    ):
+        finished = _snakemake(plan, request, state, display, log, dry_run=False)
     if interrupted.is_set():
         raise Interrupted(f"interrupted; run again to go on. The log is {path}")
     if state.failures:

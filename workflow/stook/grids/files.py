@@ -16,6 +16,7 @@ from stook.errors import ResultsError
 Codec = Literal["zstd", "zlib"]
 TIME_CHUNK = 1825
 PIXEL_CHUNK = 10
+_CHUNKS = {"time": TIME_CHUNK, "lat": PIXEL_CHUNK, "lon": PIXEL_CHUNK}
 CF_TIME = xr.coders.CFDatetimeCoder(use_cftime=True)
 
 
@@ -91,7 +92,7 @@ def encoding(dataset: xr.Dataset, codec: Codec = "zlib") -> dict[str, dict[str, 
         if variable.ndim and variable.dtype.kind in "fiu":
             options |= {"compression": codec, "complevel": 1, "shuffle": codec == "zlib"}
             options["chunksizes"] = tuple(
-                min(size, {"time": TIME_CHUNK, "lat": PIXEL_CHUNK, "lon": PIXEL_CHUNK}.get(str(dim), 64))
+                min(size, _CHUNKS.get(str(dim), 64))
                 for dim, size in zip(variable.dims, variable.shape, strict=True)
             )
         result[str(name)] = options
