@@ -6,12 +6,14 @@ from dataclasses import dataclass
 
 import geopandas as gpd
 import pandas as pd
+from pyogrio.errors import DataLayerError, DataSourceError
 
 from stook.assessment.layout import Layout
 from stook.assessment.schema import Assessment, Years
 from stook.assessment.simulations import Simulation, all_simulations
 from stook.assessment.variables import system_response
 from stook.constants import OBSERVED, OUTSIDE
+from stook.errors import InputError
 from stook.grids.files import read_table
 from stook.report.assumptions import Responses
 from stook.report.geo import EPSG
@@ -81,6 +83,8 @@ def read_source(assessment: Assessment) -> Source:
     ------
     ResultsError
         If a table is missing or cannot be read.
+    InputError
+        If the region polygons cannot be read.
     """
     layout = Layout.of(assessment)
     series = all_simulations(assessment)
@@ -127,6 +131,10 @@ def _evaluated(series: list[Simulation]) -> bool:
 
 def _polygons(assessment: Assessment) -> gpd.GeoDataFrame:
     spec = assessment.regions
-    frame = gpd.read_file(assessment.path(spec.file), layer=spec.layer)
+    path = assessment.path(spec.file)
+    try:
+        frame = gpd.read_file(path, layer=spec.layer)
+    except (DataSourceError, DataLayerError) as error:
+        raise InputError(f"{path}: region polygons cannot be read ({error})") from None
     frame = frame.rename(columns={spec.name: "region"})[["region", "geometry"]].to_crs(EPSG)
     return frame.assign(region=frame["region"].astype(str))
