@@ -7,6 +7,8 @@ import subprocess
 import sys
 from pathlib import Path
 
+import pytest
+
 TESTS = Path(__file__).parents[1]
 
 
@@ -35,3 +37,28 @@ def test_level_of_the_tests() -> None:
     assert found["ar1_level_max_n30"] < 0.1
     # Shuffling fails at lag-1 correlation 0.6: 33 % were measured when the design was made.
     assert 0.27 < found["shuffle_level_n60_r06"] < 0.39
+
+
+@pytest.mark.parametrize(
+    "script",
+    [
+        pytest.param("validation/trend_level.py", marks=pytest.mark.heavy),
+        "validation/trend_real_grids.py",
+    ],
+)
+def test_tables_of_the_docs_are_those_of_the_commands(script: str) -> None:
+    command = [sys.executable, str(TESTS / script)]
+    done = subprocess.run(command, check=True, capture_output=True, text=True)
+    tables = [line for line in done.stdout.splitlines() if line.startswith("|")]
+    assert len(tables) > 5
+    documented = (TESTS.parent / "docs" / "trend.md").read_text(encoding="utf-8").splitlines()
+    assert [line for line in tables if line not in documented] == []
+
+
+def test_real_grids_warm_late_and_not_early() -> None:
+    found = last_line("validation/trend_real_grids.py")
+    # A real model under strong forcing; the early period is one run in both files.
+    assert found["A1B_late_share_p"] == found["E1_late_share_p"] == 0.001
+    assert found["A1B_late_mean_trend"] > found["E1_late_mean_trend"] > 0.15
+    assert found["A1B_early_mean_trend"] == found["E1_early_mean_trend"] < 0.1
+    assert found["A1B_early_share_shuffled"] > found["A1B_early_share_significant"]

@@ -13,8 +13,10 @@ import argparse
 import json
 
 import numpy as np
+from stook.trend.breakpoint import find_break
 from stook.trend.discovery import benjamini_hochberg, rate_for_level
 from stook.trend.field import Field
+from stook.trend.randomise import randomisations
 from stook.trend.series import TrendOptions, series_trends
 
 LEVEL = 0.05
@@ -129,6 +131,32 @@ def fields(number: int, count: int, reach: float) -> dict[str, float]:
     return {name: float(np.mean(marks)) for name, marks in found.items()}
 
 
+def breaks(number: int, count: int) -> dict[tuple[int, float], float]:
+    """Return the share of series without a break in which one is found."""
+    found = {}
+    for years in (40, 60, 100):
+        drawn = randomisations(1, tuple(range(1901, 1901 + years)), count)
+        for lag1 in CHECKED:
+            random = np.random.default_rng([5, years, int(10 * lag1)])
+            values = ar1_series(random, years, number, lag1)
+            p = [one.p for column in values.T if (one := find_break(column, drawn)) is not None]
+            found[years, lag1] = float(np.mean(np.array(p) <= LEVEL))
+    return found
+
+
+def print_breaks(number: int, count: int) -> None:
+    """Print the level of the search for a break."""
+    found = breaks(number, count)
+    print(
+        f"\nShare of {number} series without a break in which one is found, nominal 5 %, per cent"
+    )
+    print("| years |" + "".join(f" lag-1 {lag1:g} |" for lag1 in CHECKED))
+    print("|---|" + "---|" * len(CHECKED))
+    for years in (40, 60, 100):
+        cells = (f" {100 * found[years, lag1]:.1f} |" for lag1 in CHECKED)
+        print(f"| {years} |" + "".join(cells))
+
+
 def print_fields(number: int, count: int) -> None:
     """Print the level of the field tests."""
     print(f"\nShare of {number} fields without a trend called significant, nominal 5 %, per cent")
@@ -170,6 +198,7 @@ def main() -> None:
             cells = (f" {100 * powers[method, lag1, slope]:.0f} |" for slope in SLOPES)
             print(f"| {method} | {lag1:g} |" + "".join(cells))
     print_fields(given.fields, given.randomisations)
+    print_breaks(given.series // 2, min(given.randomisations, 199))
     if given.json:
         print(json.dumps(keys(found)))
 

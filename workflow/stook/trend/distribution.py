@@ -10,7 +10,7 @@ import pandas as pd
 HALF = 512
 """Bins either side of zero while values are collected."""
 
-WANTED_BINS = 40
+WANTED_BINS = 80
 """Largest number of bins between the 1st and the 99th percentile of a finished table."""
 
 COLUMNS = ["quantity", "period", "kind", "bin_low", "bin_high", "area_share"]
