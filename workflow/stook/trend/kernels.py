@@ -68,7 +68,7 @@ def theil_sen(
 ) -> np.ndarray:  # pragma: no cover - compiled
     """Return the median of the slopes between all pairs of years; ``(n, s), (n) -> (s)``.
 
-    Theil 1950, Proc. K. Ned. Akad. Wet. A 53:386; Sen 1968, J. Am. Stat. Assoc. 63:1379.
+    Theil 1950, Proc. R. Neth. Acad. Sci. A 53:386; Sen 1968, J. Am. Stat. Assoc. 63:1379.
 
     Parameters
     ----------
@@ -230,6 +230,55 @@ def lagged_sums(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def fit_surrogate(
+    n: int,
+    lag1: np.ndarray,
+    start: np.ndarray,
+    first: np.ndarray,
+    last: np.ndarray,
+    lagged: np.ndarray,
+    totals: np.ndarray,
+    powers: np.ndarray,
+    slopes: np.ndarray,
+    statistics: np.ndarray,
+) -> None:  # pragma: no cover - compiled
+    """Fit a line to one surrogate of every series from its sums; all ``(s)``, see `ar1_surrogates`.
+
+    `first` holds the first shock z_0, `totals` and `powers` the sums of z and z^2, `last` and
+    `lagged` are from `lagged_sums`; `slopes` and `statistics` are rows of `ar1_surrogates`. With
+    f = u_0, l = u_(n-1), centred time x, D = sum z_t u_(t-1) and T = sum x_t z_t:
+
+    - ``(1 - rho) sum u = f - rho l + sum z - z_0``
+    - ``(1 - rho) sum x u = x_0 f - rho x_(n-1) l + rho (sum u - l) + T - x_0 z_0``
+    - ``(1 - rho^2) sum u^2 = f^2 - rho^2 l^2 + 2 rho D + sum z^2 - z_0^2``
+    - ``sum u_t u_(t-1) = rho (sum u^2 - l^2) + D``
+    """
+    half = (n - 1) / 2.0
+    spread = n * (n * n - 1.0) / 12.0
+    neighbours = spread - half * half - half
+    scale = spread * (n - 2.0)
+    for i in range(lag1.shape[0]):
+        rho, z, e = lag1[i], first[i], last[i]
+        f = start[i] * z
+        inverse = 1.0 / (1.0 - rho)
+        total = (f - rho * e + totals[i] - z) * inverse
+        moment = half * (z - f - rho * e) + rho * (total - e) + 0.5 * slopes[i]
+        moment *= inverse
+        power = f * f - rho * rho * e * e + 2.0 * rho * lagged[i] + powers[i] - z * z
+        power *= start[i] * start[i]
+        mean = total / n
+        slope = moment / spread
+        squares = power - total * mean - slope * moment
+        products = rho * (power - e * e) + lagged[i]
+        products -= mean * (2.0 * total - f - e) - (n - 1) * mean * mean
+        products -= slope * (2.0 * moment + (half + 1.0) * (f - e))
+        products += slope * slope * neighbours
+        again = corrected_lag1(products / squares, n)
+        slopes[i] = slope
+        statistics[i] = (slope * slope * scale * (1.0 - again)) / (squares * (1.0 + again))
+
+
+@njit(cache=True, nogil=True)
 def ar1_surrogates(
     shocks: np.ndarray,
     lag1: np.ndarray,
@@ -238,15 +287,6 @@ def ar1_surrogates(
     statistics: np.ndarray,
 ) -> None:  # pragma: no cover - compiled
     """Fit a line to AR(1) surrogates; ``(n, s), (s), (m, n) -> (m, s), (m, s)``.
-
-    The sums of a surrogate u that the fit needs follow in closed form from its ends, from
-    ``D = sum z_t u_(t-1)`` and from the shocks' own sums; with f = u_0, l = u_(n-1), centred time
-    x and T = sum x_t z_t:
-
-    - ``(1 - rho) sum u = f - rho l + sum z - z_0``
-    - ``(1 - rho) sum x u = x_0 f - rho x_(n-1) l + rho (sum u - l) + T - x_0 z_0``
-    - ``(1 - rho^2) sum u^2 = f^2 - rho^2 l^2 + 2 rho D + sum z^2 - z_0^2``
-    - ``sum u_t u_(t-1) = rho (sum u^2 - l^2) + D``
 
     Parameters
     ----------
@@ -257,17 +297,13 @@ def ar1_surrogates(
     orders
         int64, shape (m, n): each row a permutation of the years.
     slopes
-        float64, shape (m, s): on entry twice T of each surrogate, exactly (a whole number); on
-        return the least-squares slope per step.
+        float64, shape (m, s): on entry twice the sum of centred time and shocks, T, of each
+        surrogate, exactly (a whole number); on return the least-squares slope per step.
     statistics
         float64, shape (m, s): on return the squared studentised slope, with the lag-1 correlation
         of the surrogate estimated anew; NaN for a surrogate without spread.
     """
     n, series = shocks.shape
-    half = (n - 1) / 2.0
-    spread = n * (n * n - 1.0) / 12.0
-    neighbours = spread - half * half - half
-    scale = spread * (n - 2.0)
     start = np.empty(series)
     totals = np.zeros(series)
     powers = np.zeros(series)
@@ -281,28 +317,18 @@ def ar1_surrogates(
         start[i] = 1.0 / np.sqrt(1.0 - lag1[i] * lag1[i])
     for j in range(orders.shape[0]):
         lagged_sums(shocks, lag1, start, orders[j], last, lagged)
-        first = shocks[orders[j, 0]]
-        slope_row = slopes[j]
-        statistic_row = statistics[j]
-        for i in range(series):
-            rho, z, e = lag1[i], first[i], last[i]
-            f = start[i] * z
-            inverse = 1.0 / (1.0 - rho)
-            total = (f - rho * e + totals[i] - z) * inverse
-            moment = half * (z - f - rho * e) + rho * (total - e) + 0.5 * slope_row[i]
-            moment *= inverse
-            power = f * f - rho * rho * e * e + 2.0 * rho * lagged[i] + powers[i] - z * z
-            power *= start[i] * start[i]
-            mean = total / n
-            slope = moment / spread
-            squares = power - total * mean - slope * moment
-            products = rho * (power - e * e) + lagged[i]
-            products -= mean * (2.0 * total - f - e) - (n - 1) * mean * mean
-            products -= slope * (2.0 * moment + (half + 1.0) * (f - e))
-            products += slope * slope * neighbours
-            again = corrected_lag1(products / squares, n)
-            slope_row[i] = slope
-            statistic_row[i] = (slope * slope * scale * (1.0 - again)) / (squares * (1.0 + again))
+        fit_surrogate(
+            n,
+            lag1,
+            start,
+            shocks[orders[j, 0]],
+            last,
+            lagged,
+            totals,
+            powers,
+            slopes[j],
+            statistics[j],
+        )
 
 
 @njit(cache=True, nogil=True)
