@@ -145,13 +145,13 @@ class _Maker:
         dims = ("horizon", "lat", "lon")
         names = {"mean": 0.3, "p05": -14, "p17": -6, "p50": 0, "p83": 6, "p95": 14}
         data: dict[str, Any] = {
-            f"change_{name}": (dims, middle + offset, {"units": "percent"})
+            f"change_{name}": (dims, middle + offset, _named(f"change, {name}", "percent"))
             for name, offset in names.items()
         }
         agreement = np.where(np.isnan(middle), np.nan, np.where(abs(middle) > 5, 1.0, 2 / 3))
-        data["agreement"] = (dims, agreement, {"units": "1"})
+        data["agreement"] = (dims, agreement, _named("share of models", "1"))
         models = np.where(np.isnan(middle), 0, len(self.world.models)).astype(np.int16)
-        data["models"] = (dims, models)
+        data["models"] = (dims, models, _named("models", "1"))
         coordinates = self.grid.coordinates() | {"horizon": horizons}
         path = self.layout.ensemble_pixels(crop, system, scenario)
         with self.job("ensemble_pixels") as job:
@@ -358,14 +358,18 @@ class _Maker:
         dims, data = ("period", "lat", "lon"), {}
         for quantity in [*INDICES, "yield"]:
             values = np.where(self.crop_mask, self.random.normal(-0.1, 0.05, shape), np.nan)
-            data[f"slope_{quantity}"] = (dims, values)
-            data[f"p_ar1_{quantity}"] = (dims, 0 * values + 0.04)
+            data[f"slope_{quantity}"] = (dims, values, _named("slope", "1"))
+            data[f"p_ar1_{quantity}"] = (dims, 0 * values + 0.04, _named("p-value", "1"))
             significant = np.where(self.crop_mask, values < -0.1, -1).astype(np.int8)
-            data[f"significant_{quantity}"] = (dims, significant)
+            data[f"significant_{quantity}"] = (dims, significant, _named("significant", "1"))
         coordinates = self.grid.coordinates() | {"period": periods}
         with self.job("trend_pixels") as job:
             path = self.layout.trend_pixels(simulation, crop, system)
             job.netcdf(xr.Dataset(data, coordinates), path, "trend")
+
+
+def _named(name: str, unit: str) -> dict[str, str]:
+    return {"long_name": name, "units": unit}
 
 
 def _summary(draws: np.ndarray) -> dict[str, Any]:

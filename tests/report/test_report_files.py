@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import json
 import shutil
+import subprocess
+import sys
 from pathlib import Path
 
 import geopandas as gpd
@@ -143,9 +146,25 @@ def test_netcdf_of_the_pixels_keeps_values_and_names_its_crs(
         for name in given.data_vars:
             if not str(name).endswith("_bnds"):
                 np.testing.assert_array_equal(written[name].values, given[name].values)
+        assert written["horizon_name"].values.tolist() == ["2041-2070", "2071-2100"]
         assert written["change_p50"].attrs["units"] == "percent"
         assert written.rio.crs.to_epsg() == 4326
         assert written.attrs["Conventions"] == "CF-1.11"
+
+
+@pytest.mark.parametrize("name", ["change_maize_rainfed_high", "trend_maize_rainfed_observed"])
+def test_maps_pass_the_cf_checker(folder: Path, tmp_path: Path, name: str) -> None:
+    """IOOS compliance-checker, CF 1.11, strict, offline."""
+    out = tmp_path / "out.json"
+    checker = Path(sys.executable).with_name("compliance-checker")
+    options = ["--test=cf:1.11", "--criteria", "strict", "-f", "json", "-o", str(out)]
+    subprocess.run(
+        [checker, *options, folder / "maps" / f"{name}.nc"], check=True, capture_output=True
+    )
+    report = json.loads(out.read_text(encoding="utf-8"))["cf:1.11"]
+    assert report["all_priorities"]
+    found = [message for entry in report["all_priorities"] for message in entry["msgs"]]
+    assert found == []
 
 
 def test_trend_maps_are_handed_on(reported: Assessment, folder: Path) -> None:

@@ -101,7 +101,8 @@ class Run(Section):
 class Simulations(Section):
     """The ensemble: a file pattern with named fields, or explicit runs.
 
-    The pattern holds ``{variable}``, ``{model}``, ``{scenario}``, ``{realisation}``; other parts may use ``*``.
+    The pattern holds ``{variable}``, ``{model}``, ``{scenario}``, ``{realisation}``; other
+    parts may use ``*``.
     """
 
     pattern: str | None = None

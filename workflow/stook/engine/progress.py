@@ -63,13 +63,10 @@ class State:
                 counts = values["stats"]
                 self.wanted = Counter({k: n for k, n in counts.items() if "_" in k})
             case "job_info":
-                self.jobs[values["jobid"]] = Planned(
-                    values["rule_name"], dict(values["wildcards"]), values["reason"]
-                )
-            case "job_started":
-                for job in values["jobs"]:
-                    if job in self.jobs and "_" in self.jobs[job].rule:
-                        self.running[job] = (self.jobs[job].rule, self.clock())
+                job = Planned(values["rule_name"], dict(values["wildcards"]), values["reason"])
+                self.jobs[values["jobid"]] = job
+                if "_" in job.rule:
+                    self.running[values["jobid"]] = (job.rule, self.clock())
             case "job_finished":
                 if rule_start := self.running.pop(values["job_id"], None):
                     rule, start = rule_start

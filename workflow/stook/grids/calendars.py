@@ -11,7 +11,6 @@ from typing import Literal
 
 import cftime
 import numpy as np
-import xarray as xr
 
 from stook.errors import InputError
 
@@ -28,7 +27,10 @@ CALENDARS = {
     "366_day": "all_leap",
     "360_day": "360_day",
 }
-"""Calendar names that are read (CF 1.13, section 4.4.1; ``no_leap`` is common) and what they mean."""
+"""Calendar names that are read (CF 1.13, section 4.4.1; ``no_leap`` too) and their meaning."""
+
+
+_STAMP_ERROR = 1e-3  # days; a stamp a moment before midnight, from rounding, is the next day
 
 
 def calendar_name(given: str, path: Path | str) -> str:
@@ -109,7 +111,7 @@ def time_step(times: np.ndarray, path: Path | str) -> TimeStep:
 def step_number(times: np.ndarray, step: TimeStep) -> np.ndarray:
     """Return consecutive integers for consecutive steps: days, months or years, int64."""
     if step == "daily":
-        return np.floor(_ordinals(times)).astype(np.int64)
+        return np.floor(_ordinals(times) + _STAMP_ERROR).astype(np.int64)
     if step == "monthly":
         return np.array([time.year * 12 + time.month - 1 for time in times], dtype=np.int64)
     return years_of(times)
@@ -135,29 +137,27 @@ def check_continuous(times: np.ndarray, step: TimeStep, where: str) -> None:
     raise InputError(f"{where}: gap between {before} and {after}; a {step} series needs every step")
 
 
-def join_in_time(parts: list[xr.DataArray], where: str) -> xr.DataArray:
-    """Join the files of one series in time, ordered by their first date.
+def join_order(starts: list[np.ndarray], where: str) -> list[int]:
+    """Return the order in which the files of one series follow each other in time.
 
     Parameters
     ----------
-    parts
-        Arrays with a cftime coordinate ``time`` and the same grid.
+    starts
+        cftime dates of each file, any order.
     where
         What the series is, for messages.
 
     Raises
     ------
     InputError
-        If calendars differ, or steps overlap, repeat or are missing.
+        If calendars differ between the files, or a file has no time step.
     """
-    calendars = {part["time"].dt.calendar for part in parts}
+    if any(len(times) == 0 for times in starts):
+        raise InputError(f"{where}: a file has no time step")
+    calendars = {times[0].calendar for times in starts}
     if len(calendars) > 1:
         raise InputError(f"{where}: files have different calendars: {', '.join(sorted(calendars))}")
-    ordered = sorted(parts, key=lambda part: part["time"].values[0])
-    joined = ordered[0] if len(ordered) == 1 else xr.concat(ordered, "time", join="override")
-    times = joined["time"].values
-    check_continuous(times, time_step(times, where), where)
-    return joined
+    return sorted(range(len(starts)), key=lambda i: starts[i][0])
 
 
 def _ordinals(times: np.ndarray) -> np.ndarray:

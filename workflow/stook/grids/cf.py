@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 
 import cf_xarray  # noqa: F401  (registers the `.cf` accessor)
@@ -19,42 +17,28 @@ STANDARD_NAMES = {
     "tas": ("air_temperature",),
     "tasmin": ("air_temperature",),
     "tasmax": ("air_temperature",),
-    "pr": ("precipitation_flux", "lwe_precipitation_rate", "rainfall_flux"),
+    "pr": ("precipitation_flux", "lwe_precipitation_rate"),
     "rsds": ("surface_downwelling_shortwave_flux_in_air",),
     "hurs": ("relative_humidity",),
 }
 """CF standard names a variable may carry when it does not carry its CMIP name."""
 
 _EXTREME = {"tasmin": "minimum", "tasmax": "maximum"}
-_PROJECTED = ("projection_x_coordinate", "projection_y_coordinate", "grid_latitude")
 
 
-@contextmanager
-def open_input(path: Path) -> Iterator[xr.Dataset]:
-    """Open an input NetCDF file lazily, with cftime dates; close it at the end of the block.
+def open_input(path: Path) -> xr.Dataset:
+    """Open an input NetCDF file lazily; use it in a ``with`` block, which closes it.
+
+    The time coordinate, whatever its name in the file, becomes ``time`` with cftime dates. Where
+    time has bounds that contain it, the date is the middle of the bounds, so that a value stamped
+    at the end of its day or month belongs to that day or month.
 
     Raises
     ------
     InputError
         If it is missing, is no NetCDF file, is damaged, or its times cannot be decoded.
     """
-    dataset = open_lazily(path)
-    try:
-        yield dataset
-    finally:
-        dataset.close()
-
-
-def open_lazily(path: Path, chunks: dict[str, int] | None = None) -> xr.Dataset:
-    """Open an input NetCDF file lazily and leave it open; see `open_input`."""
-    if not Path(path).exists():
-        raise InputError(f"{path}: no such file")
-    try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # other people's encodings; what matters is checked
-            raw = xr.open_dataset(path, engine="netcdf4", decode_times=False, chunks=chunks)
-    except (OSError, ValueError, RuntimeError) as error:
-        raise InputError(f"{path}: not a readable NetCDF file ({_reason(error)})") from None
+    raw = open_undecoded(path)
     try:
         return _decode_times(raw, path)
     except InputError:
@@ -62,19 +46,93 @@ def open_lazily(path: Path, chunks: dict[str, int] | None = None) -> xr.Dataset:
         raise
 
 
-def _decode_times(raw: xr.Dataset, path: Path) -> xr.Dataset:
-    if "time" not in raw.variables:
-        return raw
-    attributes = raw["time"].attrs
-    if "since" not in str(attributes.get("units", "")):
-        raise InputError(f"{path}: time has no units like 'days since 1850-01-01'")
-    name = calendar_name(str(attributes.get("calendar", "standard")), path)
-    only_time = raw["time"].assign_attrs(calendar=name)
+def open_undecoded(path: Path) -> xr.Dataset:
+    """Open an input NetCDF file lazily, with missing values and packing decoded but not times.
+
+    Raises
+    ------
+    InputError
+        If it is missing, is no NetCDF file, or is damaged.
+    """
+    if not Path(path).exists():
+        raise InputError(f"{path}: no such file")
     try:
-        times = xr.decode_cf(only_time.to_dataset(name="t"), decode_times=CF_TIME)["time"]
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # other people's encodings; what matters is checked
+            return xr.open_dataset(path, engine="netcdf4", decode_times=False)
+    except (OSError, ValueError, RuntimeError, AttributeError) as error:
+        raise InputError(f"{path}: not a readable NetCDF file ({_reason(error)})") from None
+
+
+def read_window(path: Path, name: str, window: dict[str, slice | np.ndarray]) -> np.ndarray:
+    """Read part of a variable of an input file.
+
+    Parameters
+    ----------
+    path
+        The file.
+    name
+        The variable's name in the file.
+    window
+        Index, slice or indices for every dimension that is not read whole, by dimension name.
+
+    Returns
+    -------
+    ndarray
+        float32 or float64, dimensions as in the file; missing values are NaN.
+
+    Raises
+    ------
+    InputError
+        If the values cannot be read: the file is damaged or cut short.
+    """
+    with open_undecoded(path) as dataset:
+        try:
+            values = dataset[name].isel(window).values
+        except (OSError, ValueError, RuntimeError, KeyError) as error:
+            raise InputError(f"{path}: {name} cannot be read ({_reason(error)})") from None
+    return values if values.dtype in (np.float32, np.float64) else values.astype(np.float64)
+
+
+def _decode_times(raw: xr.Dataset, path: Path) -> xr.Dataset:
+    time = _time_name(raw)
+    if time is None:
+        return raw
+    attributes = raw[time].attrs
+    units = str(attributes.get("units", ""))
+    if "since" not in units:
+        raise InputError(f"{path}: {time} has no units like 'days since 1850-01-01'")
+    calendar = calendar_name(str(attributes.get("calendar", "standard")), path)
+    encoded = xr.Variable(
+        raw[time].dims, _middle(raw, time), {"units": units, "calendar": calendar}
+    )
+    try:
+        dates = xr.decode_cf(xr.Dataset({"t": encoded}), decode_times=CF_TIME)["t"].values
     except (ValueError, OverflowError) as error:
-        raise InputError(f"{path}: time cannot be decoded ({_reason(error)})") from None
-    return raw.assign_coords(time=times)
+        raise InputError(f"{path}: {time} cannot be decoded ({_reason(error)})") from None
+    renamed = raw if time == "time" else raw.rename({time: "time"})
+    return renamed.assign_coords(time=(renamed["time"].dims, dates))
+
+
+def _time_name(raw: xr.Dataset) -> str | None:
+    if "time" in raw.variables:
+        return "time"
+    for name, variable in raw.variables.items():
+        if variable.attrs.get("standard_name") == "time" and variable.dims == (name,):
+            return str(name)
+    return None
+
+
+def _middle(raw: xr.Dataset, time: str) -> np.ndarray:
+    """Return encoded times, moved to the middle of their bounds where these contain them."""
+    stamps = np.asarray(raw[time].values, dtype=np.float64)
+    bounds = raw.variables.get(str(raw[time].attrs.get("bounds", "")))
+    if bounds is None or bounds.shape != (*stamps.shape, 2):
+        return stamps
+    low, high = np.asarray(bounds.values, dtype=np.float64).T
+    if np.all((low < high) & (low <= stamps) & (stamps <= high)):
+        return (low + high) / 2
+    return stamps
 
 
 def _reason(error: Exception) -> str:
@@ -84,6 +142,9 @@ def _reason(error: Exception) -> str:
 
 def horizontal_axes(dataset: xr.Dataset, path: Path | str) -> tuple[xr.DataArray, xr.DataArray]:
     """Return the latitude and longitude coordinates of a rectilinear grid.
+
+    They are found by standard name, by units (degrees_north, degrees_east), or by the plain names
+    latitude, longitude, lat, lon.
 
     Raises
     ------
@@ -96,12 +157,13 @@ def horizontal_axes(dataset: xr.Dataset, path: Path | str) -> tuple[xr.DataArray
         names += [n for n in dataset.cf.coordinates.get(key, []) if n not in names]
         names += [n for n in (key, key[:3]) if n in dataset.variables and n not in names]
         if not names:
-            raise InputError(f"{path}: has no {key} coordinate (CF standard_name {key})")
-        axes = [n for n in names if dataset[n].ndim == 1 and dataset[n].dims == (n,)]
+            unit = "degrees_north" if key == "latitude" else "degrees_east"
+            raise InputError(f"{path}: has no {key} coordinate (standard_name {key}, units {unit})")
+        axes = [n for n in names if dataset[n].dims == (n,)]
         if not axes:
             raise InputError(
                 f"{path}: the grid is rotated, curvilinear or unstructured "
-                f"({names[0]} has dimensions {', '.join(map(str, dataset[names[0]].dims))}); "
+                f"({names[0]} has dimensions ({', '.join(map(str, dataset[names[0]].dims))})); "
                 "regrid it to regular latitude and longitude first"
             )
         found.append(dataset[axes[0]])
@@ -111,7 +173,8 @@ def horizontal_axes(dataset: xr.Dataset, path: Path | str) -> tuple[xr.DataArray
 def find_variable(dataset: xr.Dataset, name: str, path: Path | str) -> xr.DataArray:
     """Return a climate variable by its CMIP name, or by CF standard name and cell methods.
 
-    A lone ``air_temperature`` without minimum or maximum in its cell methods is tas.
+    ``air_temperature`` whose cell methods name a minimum is tasmin, a maximum tasmax; with a mean
+    or without cell methods it is tas.
 
     Raises
     ------
@@ -141,38 +204,50 @@ def _matches_method(name: str, cell_methods: str) -> bool:
     extreme = _EXTREME.get(name)
     if extreme:
         return extreme in cell_methods
-    return name != "tas" or not any(word in cell_methods for word in _EXTREME.values())
+    if name != "tas":
+        return True
+    extremes = any(word in cell_methods for word in _EXTREME.values())
+    return not extremes and (not cell_methods.strip() or "mean" in cell_methods)
 
 
-def axis_edges(axis: xr.DataArray, dataset: xr.Dataset, path: Path | str) -> np.ndarray:
-    """Return cell edges of an ascending axis: from its bounds, else halfway between centres.
+def axis_cells(axis: xr.DataArray, dataset: xr.Dataset, path: Path | str) -> np.ndarray:
+    """Return cell edges along an axis: from its bounds, else halfway between centres.
 
     Parameters
     ----------
     axis
-        Ascending 1-D coordinate, degrees.
+        1-D coordinate, degrees, rising or falling without a jump (longitudes: after unwrapping).
     dataset
         Where bounds are looked for.
+    path
+        For messages.
 
     Returns
     -------
     ndarray
-        float64, shape (axis + 1,).
+        float64, shape (axis, 2): lower and upper edge of each cell, in the order of the axis.
 
     Raises
     ------
     InputError
-        If there is only one cell and no bounds, or bounds have gaps.
+        If there is only one cell and no bounds, or bounds leave gaps or overlap.
     """
     centres = axis.values.astype(np.float64)
     bounds = dataset.variables.get(str(axis.attrs.get("bounds", "")))
     if bounds is not None and bounds.shape == (len(centres), 2):
-        pairs = np.sort(bounds.values.astype(np.float64), axis=1)
-        pairs = pairs[np.argsort(pairs[:, 0], kind="stable")]
-        if np.allclose(pairs[1:, 0], pairs[:-1, 1], atol=1e-4):
-            return np.append(pairs[:, 0], pairs[-1, 1])
-        raise InputError(f"{path}: bounds of {axis.name} have gaps or overlaps")
-    if len(centres) < 2:
+        away = np.asarray(bounds.values, dtype=np.float64) - centres[:, None]
+        away = (away + 180.0) % 360.0 - 180.0
+        cells = centres[:, None] + np.sort(away, axis=1)
+    elif len(centres) > 1:
+        middle = (centres[:-1] + centres[1:]) / 2
+        edges = np.concatenate(
+            [[2 * centres[0] - middle[0]], middle, [2 * centres[-1] - middle[-1]]]
+        )
+        cells = np.sort(np.stack([edges[:-1], edges[1:]], axis=1), axis=1)
+    else:
         raise InputError(f"{path}: {axis.name} has one value and no bounds; its cell is unknown")
-    middle = (centres[:-1] + centres[1:]) / 2
-    return np.concatenate([[2 * centres[0] - middle[0]], middle, [2 * centres[-1] - middle[-1]]])
+    ordered = cells[np.argsort(cells[:, 0], kind="stable")]
+    width = (ordered[:, 1] - ordered[:, 0]).min()
+    if width <= 0 or np.abs(ordered[1:, 0] - ordered[:-1, 1]).max(initial=0.0) > 1e-3 * width:
+        raise InputError(f"{path}: bounds of {axis.name} have gaps or overlaps")
+    return cells

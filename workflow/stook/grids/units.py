@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
-import numpy as np
 from cf_units import Unit
 
 from stook.errors import InputError
@@ -22,7 +22,17 @@ INSIDE_UNITS = {
 _MASS_FLUX_PER_RATE = 1000.0
 """kg m-2 of water per metre of depth (density 1000 kg m-3; common practice)."""
 
-_ALIASES = {"mm/d": "mm day-1", "degf": "degF", "degc": "degC", "percent": "%"}
+_LARGE = 1024.0  # two points of a straight line, far apart: the slope keeps all its digits
+_TEMPERATURES = ("tas", "tasmin", "tasmax")
+_TEMPERATURE_ALIASES = {
+    name: unit
+    for unit, names in {
+        "degC": ("c", "degc", "deg c", "degrees c", "°c"),
+        "degF": ("f", "degf", "deg f", "degrees f", "°f"),
+    }.items()
+    for name in names
+}
+_UNEVEN = re.compile(r"month|\bmon\b", re.IGNORECASE)
 
 
 def linear_conversion(unit: str | None, variable: str, path: Path | str) -> tuple[float, float]:
@@ -49,7 +59,7 @@ def linear_conversion(unit: str | None, variable: str, path: Path | str) -> tupl
         depth of water at 1000 kg m-3.
     """
     wanted = INSIDE_UNITS[variable]
-    if not unit:
+    if not unit or not unit.strip():
         raise InputError(f"{path}: {variable} has no units attribute; it must convert to {wanted}")
     source = _parse(unit, variable, path)
     target = Unit(wanted)
@@ -58,22 +68,24 @@ def linear_conversion(unit: str | None, variable: str, path: Path | str) -> tupl
         density = 1.0 / _MASS_FLUX_PER_RATE
         source = source * Unit("m3 kg-1")
     if not source.is_convertible(target):
-        raise InputError(f"{path}: {variable} has unit {unit!r}, which does not convert to {wanted}")
-    offset, one = (float(source.convert(value, target)) for value in (0.0, 1.0))
-    return (one - offset) * density, offset * density
+        raise InputError(f"{path}: {variable} has unit {unit!r}, not convertible to {wanted}")
+    offset, large = (float(source.convert(value, target)) for value in (0.0, _LARGE))
+    return (large - offset) / _LARGE * density, offset * density
 
 
 def _parse(unit: str, variable: str, path: Path | str) -> Unit:
+    if _UNEVEN.search(unit):
+        raise InputError(
+            f"{path}: {variable} has unit {unit!r}; months differ in length, "
+            f"divide by the days of each month and give {INSIDE_UNITS[variable]}"
+        )
+    name = unit.strip().lower()
+    if variable in _TEMPERATURES:
+        unit = _TEMPERATURE_ALIASES.get(name, unit)
     try:
-        return Unit(_ALIASES.get(unit.strip().lower(), unit))
+        return Unit(unit)
     except ValueError:
         raise InputError(
             f"{path}: {variable} has unit {unit!r}, which UDUNITS does not know; "
             f"it must convert to {INSIDE_UNITS[variable]}"
         ) from None
-
-
-def to_inside(values: np.ndarray, unit: str | None, variable: str, path: Path) -> np.ndarray:
-    """Return values in the inside unit of a variable, float64; see `linear_conversion`."""
-    scale, offset = linear_conversion(unit, variable, path)
-    return np.asarray(values, dtype=np.float64) * scale + offset

@@ -48,9 +48,23 @@ def region_layers(polygons: gpd.GeoDataFrame, changes: pd.DataFrame) -> dict[str
     return layers
 
 
-def with_crs(dataset: xr.Dataset) -> xr.Dataset:
-    """Return a dataset on (lat, lon) that names its coordinate reference system (CF 1.11, 5.6)."""
-    described = dataset.rio.write_crs(EPSG, grid_mapping_name=_GRID_MAPPING)
+def for_exchange(dataset: xr.Dataset) -> xr.Dataset:
+    """Return a dataset on (lat, lon) as other programs expect it by CF.
+
+    It names its coordinate reference system (CF 1.11, section 5.6), and a dimension of names,
+    such as ``horizon``, keeps them in an auxiliary coordinate ``horizon_name`` (section 6.1), for a
+    coordinate variable proper must be numeric.
+    """
+    names = {
+        str(name): f"{name}_name"
+        for name in dataset.indexes
+        if dataset[name].dtype.kind not in "iuf"
+    }
+    described = dataset.reset_index(list(names)).rename_vars(names)
+    for dimension, name in names.items():
+        described[name].attrs.setdefault("long_name", f"name of the {dimension}")
+    described = described.rio.write_crs(EPSG, grid_mapping_name=_GRID_MAPPING)
+    described[_GRID_MAPPING].attrs["long_name"] = "coordinate reference system"
     for name, variable in described.data_vars.items():
         if {"lat", "lon"} <= set(variable.dims):
             described[name].attrs["grid_mapping"] = _GRID_MAPPING

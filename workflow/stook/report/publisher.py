@@ -14,7 +14,7 @@ from stook.assessment.layout import Layout
 from stook.assessment.schema import Assessment
 from stook.audit.ledger import Job, forget, ledger_table
 from stook.grids.files import write_table
-from stook.report.geo import bands, with_crs
+from stook.report.geo import bands, for_exchange
 from stook.report.page import Entry, Picture
 from stook.report.style import Drawing
 
@@ -80,7 +80,7 @@ class Publisher:
         folder = self.folder / "maps"
         with self._job(parents) as job:
             whole = folder / f"{name}.nc"
-            job.netcdf(with_crs(dataset), whole, title)
+            job.netcdf(for_exchange(dataset), whole, title)
             self._list("Maps", whole, title)
             for step, names in rasters.items():
                 path = folder / f"{name}_{step}.tif"
