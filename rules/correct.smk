@@ -9,8 +9,6 @@ rule correct_tile:
         evaluation=LAYOUT.evaluation("{simulation}", "{tile}"),
     log:
         "logs/correct/tile_{simulation}_{tile}.log",
-    benchmark:
-        "logs/correct/tile_{simulation}_{tile}.tsv"
     conda:
         "environment.yaml"
     threads: PLAN.threads(workflow.cores)
@@ -31,8 +29,6 @@ rule correct_summary:
         table=LAYOUT.evaluation_table,
     log:
         "logs/correct/summary.log",
-    benchmark:
-        "logs/correct/summary.tsv"
     conda:
         "environment.yaml"
     threads: 1

@@ -7,8 +7,6 @@ rule ensemble_changes:
         yearly=LAYOUT.yearly,
     log:
         "logs/ensemble/changes.log",
-    benchmark:
-        "logs/ensemble/changes.tsv"
     conda:
         "environment.yaml"
     threads: 1
@@ -29,8 +27,6 @@ rule ensemble_pixels:
         grids=LAYOUT.ensemble_pixels("{crop}", "{system}", "{scenario}"),
     log:
         "logs/ensemble/pixels_{crop}_{system}_{scenario}.log",
-    benchmark:
-        "logs/ensemble/pixels_{crop}_{system}_{scenario}.tsv"
     conda:
         "environment.yaml"
     threads: 1

@@ -6,8 +6,6 @@ rule prepare_layers:
         layers=LAYOUT.layers,
     log:
         "logs/prepare/layers.log",
-    benchmark:
-        "logs/prepare/layers.tsv"
     conda:
         "environment.yaml"
     threads: 1
@@ -28,8 +26,6 @@ rule prepare_tile:
         grids=LAYOUT.prepared("{simulation}", "{tile}"),
     log:
         "logs/prepare/tile_{simulation}_{tile}.log",
-    benchmark:
-        "logs/prepare/tile_{simulation}_{tile}.tsv"
     conda:
         "environment.yaml"
     threads: PLAN.threads(workflow.cores)

@@ -5,8 +5,6 @@ rule regions_overlay:
         overlay=LAYOUT.overlay,
     log:
         "logs/regions/overlay.log",
-    benchmark:
-        "logs/regions/overlay.tsv"
     conda:
         "environment.yaml"
     threads: 1
@@ -31,8 +29,6 @@ rule regions_totals:
         totals=LAYOUT.totals("{simulation}", "{crop}"),
     log:
         "logs/regions/totals_{simulation}_{crop}.log",
-    benchmark:
-        "logs/regions/totals_{simulation}_{crop}.tsv"
     conda:
         "environment.yaml"
     threads: PLAN.threads(workflow.cores)

@@ -5,8 +5,6 @@ rule report_page:
         page=LAYOUT.report_page,
     log:
         "logs/report/page.log",
-    benchmark:
-        "logs/report/page.tsv"
     conda:
         "environment.yaml"
     threads: 1

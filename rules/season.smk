@@ -6,8 +6,6 @@ rule season_tile:
         indices=LAYOUT.season("{simulation}", "{crop}", "{system}", "{tile}"),
     log:
         "logs/season/tile_{simulation}_{crop}_{system}_{tile}.log",
-    benchmark:
-        "logs/season/tile_{simulation}_{crop}_{system}_{tile}.tsv"
     conda:
         "environment.yaml"
     threads: PLAN.threads(workflow.cores)

@@ -9,8 +9,6 @@ rule trend_pixels:
         field=LAYOUT.trend_field("{simulation}", "{crop}", "{system}"),
     log:
         "logs/trend/pixels_{simulation}_{crop}_{system}.log",
-    benchmark:
-        "logs/trend/pixels_{simulation}_{crop}_{system}.tsv"
     conda:
         "environment.yaml"
     threads: PLAN.threads(workflow.cores)
@@ -30,8 +28,6 @@ rule trend_regions:
         table=LAYOUT.trend_regions("{simulation}"),
     log:
         "logs/trend/regions_{simulation}.log",
-    benchmark:
-        "logs/trend/regions_{simulation}.tsv"
     conda:
         "environment.yaml"
     threads: 1

@@ -5,8 +5,6 @@ rule yields_coefficients:
         draws=LAYOUT.coefficients("{crop}", "{system}"),
     log:
         "logs/yields/coefficients_{crop}_{system}.log",
-    benchmark:
-        "logs/yields/coefficients_{crop}_{system}.tsv"
     conda:
         "environment.yaml"
     threads: 1
@@ -29,8 +27,6 @@ rule yields_grid:
         grids=LAYOUT.yields("{simulation}", "{crop}", "{system}"),
     log:
         "logs/yields/grid_{simulation}_{crop}_{system}.log",
-    benchmark:
-        "logs/yields/grid_{simulation}_{crop}_{system}.tsv"
     conda:
         "environment.yaml"
     threads: PLAN.threads(workflow.cores)

@@ -17,11 +17,27 @@ _PARENT = os.getppid()
 """The process that started this one, noted before anything else."""
 
 
-def main(arguments: list[str] | None = None) -> int:
-    """Run one job; return its exit status."""
+def main() -> int:
+    """Run the job of the command line; return its exit status.
+
+    Inside a run the job is handed to the run's server, which has the libraries loaded.
+    """
+    import signal
+    import sys
+
+    from stook.engine.forkserver import SINGLE_THREADED, ask
+
+    os.environ.update(SINGLE_THREADED)
+    _end_with_parent()
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
+    status = ask(sys.argv[1:])
+    return run_arguments(sys.argv[1:]) if status is None else status
+
+
+def run_arguments(arguments: list[str]) -> int:
+    """Run one job in this process; return its exit status."""
     import argparse
     import shlex
-    import signal
     import sys
 
     parser = argparse.ArgumentParser(prog="python -m stook.job", description=__doc__)
@@ -32,9 +48,7 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("wildcards", nargs="*", help="key=value")
     given = parser.parse_intermixed_args(arguments)
     wildcards = dict(text.split("=", 1) for text in given.wildcards)
-    _end_with_parent()
-    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
-    print(f"python -m stook.job {shlex.join(arguments or sys.argv[1:])}", flush=True)
+    print(f"python -m stook.job {shlex.join(arguments)}", flush=True)
 
     from stook.errors import StookError
 

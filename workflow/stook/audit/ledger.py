@@ -1,7 +1,8 @@
 """The ledger: one record per result file, written by the job that made the file.
 
-A record names the file's SHA-256, size, rule, seconds, parents with their own SHA-256 at the time
-of reading, and per variable the count of missing values, minimum, mean and maximum.
+A record names the file's SHA-256, size, rule, seconds and peak memory of the job, parents with
+their own SHA-256 at the time of reading, and per variable the count of missing values, minimum,
+mean and maximum.
 """
 
 from __future__ import annotations
@@ -10,6 +11,7 @@ import datetime
 import glob
 import hashlib
 import json
+import resource
 import time
 from collections.abc import Iterable
 from pathlib import Path
@@ -33,7 +35,7 @@ INPUTS_FOLDER = "inputs"
 """Folder inside the ledger that remembers the digests of raw inputs by size and date."""
 
 LEDGER_COLUMNS = (
-    *("path", "rule", "size", "sha256", "seconds", "parents"),
+    *("path", "rule", "size", "sha256", "seconds", "peak_mib", "parents"),
     *("variable", "missing", "minimum", "mean", "maximum"),
 )
 """Columns of `ledger_table`."""
@@ -167,6 +169,7 @@ class Job:
 
     def _finish(self) -> None:
         seconds = round(time.perf_counter() - self._start, 3)
+        peak_mib = round(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024, 1)
         parents = {str(_relative(p, self.root)): self._parent_digest(p) for p in self.parents}
         for path, extra in self._outputs.items():
             temporary = temporary_name(path)
@@ -177,6 +180,7 @@ class Job:
                 "rule": self.rule,
                 "wildcards": self.wildcards,
                 "seconds": seconds,
+                "peak_mib": peak_mib,
                 "parents": parents,
                 **extra,
             }
@@ -227,9 +231,10 @@ def ledger_table(root: Path) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        path, rule, size (bytes), sha256, seconds, parents (joined by ``; ``), variable, missing
-        (count), minimum, mean, maximum (unit of the variable); sorted by path. A file without
-        numeric variables has one row in which the last five are empty.
+        path, rule, size (bytes), sha256, seconds, peak_mib (memory of the job, MiB), parents
+        (joined by ``; ``), variable, missing (count), minimum, mean, maximum (unit of the
+        variable); sorted by path. A file without numeric variables has one row in which the last
+        five are empty.
     """
     rows: list[dict[str, Any]] = []
     folder = root / "ledger"
@@ -237,7 +242,7 @@ def ledger_table(root: Path) -> pd.DataFrame:
         if path.relative_to(folder).parts[0] == INPUTS_FOLDER:
             continue
         record = json.loads(path.read_text(encoding="utf-8"))
-        row = {key: record[key] for key in ("path", "rule", "size", "sha256", "seconds")}
+        row = {key: record[key] for key in LEDGER_COLUMNS[:6]}
         row["parents"] = "; ".join(record["parents"])
         variables = record["variables"] or {None: {}}
         rows += [row | {"variable": name} | values for name, values in variables.items()]

@@ -19,6 +19,7 @@ from rich.console import Console
 
 import stook
 from stook.engine import logger
+from stook.engine.forkserver import forkserver
 from stook.engine.lock import STATE, run_lock
 from stook.engine.plan import Plan
 from stook.engine.progress import Display, Failure, Planned, State, last_error, stage_of
@@ -78,6 +79,7 @@ def run(plan: Plan, request: Request, console: Console) -> int:
         run_lock(plan.root),
         path.open("w", encoding="utf-8") as log,
         Display(console, state) as display,
+        forkserver(),
         _ending_jobs() as interrupted,
     ):
         finished = _snakemake(plan, request, state, display, log, dry_run=False)
