@@ -1,0 +1,232 @@
+"""What an assessment requires of its climate series: variables, periods, time steps, coverage."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+
+import numpy as np
+
+from stook.assessment.inventory import SeriesFacts, as_problems
+from stook.assessment.schema import Assessment
+from stook.assessment.simulations import Simulation
+from stook.assessment.variables import series_variables, sources, system_indices, system_response
+from stook.constants import OBSERVED
+from stook.errors import Problem, StookError
+from stook.grids.analysis import AnalysisGrid
+from stook.season.definition import (
+    SEASON,
+    DaysAbove,
+    DegreeDays,
+    DrySpell,
+    IndexDefinition,
+    WetDays,
+    needed_variables,
+)
+
+DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays)
+"""Indices that cannot be taken from monthly or annual means."""
+
+Facts = Mapping[str, Mapping[str, SeriesFacts]]
+"""Facts by simulation and variable."""
+
+
+def response_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:
+    """Return what is wrong with response documents, and the indices no simulation can give."""
+    problems: dict[Problem, None] = {}
+    for crop, system in assessment.systems:
+        path = assessment.path(assessment.system(crop, system).response)
+        try:
+            response = system_response(assessment, crop, system)
+        except StookError as error:
+            problems |= dict.fromkeys(as_problems(error))
+            continue
+        if (response.crop, response.system) != (crop, system):
+            message = (
+                f"is the response of {response.crop}, {response.system}; "
+                f"it is used for {crop}, {system}"
+            )
+            problems[Problem("warning", str(path), message)] = None
+        for name, definition in system_indices(assessment, crop, system).items():
+            where = str(path if name in response.indices else assessment.source)
+            lacking = (
+                _lacking_phase(assessment, crop, system, definition),
+                _lacking_variable(definition, found),
+            )
+            for text in filter(None, lacking):
+                problems[Problem("error", where, f"index {name} {text}")] = None
+    return list(problems)
+
+
+def _lacking_phase(
+    assessment: Assessment, crop: str, system: str, definition: IndexDefinition
+) -> str | None:
+    phases = [SEASON, *assessment.system(crop, system).phases]
+    if definition.phase in phases:
+        return None
+    return (
+        f"is taken over the phase {definition.phase}, which {crop}, {system} has not; "
+        f"it has {', '.join(phases)}"
+    )
+
+
+def _lacking_variable(definition: IndexDefinition, found: Sequence[Simulation]) -> str | None:
+    without = [s for s in found if sources(definition, s.files) is None]
+    if not without:
+        return None
+    needed = needed_variables(definition)
+    lost = [v for v in needed if v not in without[0].files] or list(needed)
+    return f"needs {_listed(lost)}, which {_listed([s.name for s in without])} has not"
+
+
+def series_problems(
+    assessment: Assessment, found: Sequence[Simulation], facts: Facts, grid: AnalysisGrid | None
+) -> list[Problem]:
+    """Return what is wrong with the series of each simulation, taken together."""
+    problems: list[Problem] = []
+    for simulation in found:
+        series = facts.get(simulation.name, {})
+        if series:
+            problems += _alike(series)
+            problems += _periods(assessment, simulation.name, series)
+            problems += _steps(assessment, simulation, series)
+        if grid is not None:
+            problems += [p for one in series.values() for p in _coverage(one, grid)]
+    problems += _corrected(assessment, found, facts)
+    return problems
+
+
+def _alike(series: Mapping[str, SeriesFacts]) -> Iterator[Problem]:
+    first, *others = series.values()
+    for other in others:
+        for what in ("calendar", "step"):
+            one, two = getattr(first.series, what), getattr(other.series, what)
+            if one != two:
+                name = "time step" if what == "step" else what
+                yield _problem(
+                    other,
+                    f"{other.variable} has the {name} {two}, {first.variable} has {one}; "
+                    "the variables of one simulation need the same",
+                )
+
+
+def _periods(
+    assessment: Assessment, name: str, series: Mapping[str, SeriesFacts]
+) -> Iterator[Problem]:
+    """Yield the periods that the years common to all variables do not cover."""
+    wanted = {"periods.baseline": assessment.periods.baseline}
+    if assessment.correct.calibration:
+        wanted["correct.calibration"] = assessment.correct.calibration
+    if name != OBSERVED:
+        for horizon, years in assessment.periods.horizons.items():
+            wanted[f"periods.horizons.{horizon}"] = years
+    for one in series.values():
+        for key, (first, last) in wanted.items():
+            if first >= one.years[0] and last <= one.years[1]:
+                continue
+            yield _problem(one, f"{_whole_years(one)}; {key} needs {first} to {last}")
+        if assessment.periods.span and name != OBSERVED:
+            first, last = assessment.periods.span
+            if first < one.years[0] or last > one.years[1]:
+                yield _problem(one, f"{_whole_years(one)}; periods.span is {first} to {last}")
+
+
+def _whole_years(one: SeriesFacts) -> str:
+    first, last = one.years
+    held = f"the whole years {first} to {last}" if first <= last else "no whole year"
+    return f"{one.variable} of {one.simulation} covers {held}"
+
+
+def _steps(
+    assessment: Assessment, simulation: Simulation, series: Mapping[str, SeriesFacts]
+) -> Iterator[Problem]:
+    """Yield the indices that need daily values where the series is monthly or annual."""
+    for crop, system in assessment.systems:
+        try:
+            indices = system_indices(assessment, crop, system)
+        except StookError:
+            continue
+        for name, definition in indices.items():
+            for variable in sources(definition, simulation.files) or ():
+                one = series.get(variable)
+                if one and one.series.step != "daily" and isinstance(definition, DAILY_ONLY):
+                    yield _problem(
+                        one,
+                        f"{variable} of {one.simulation} is {one.series.step}; "
+                        f"index {name} of {crop}, {system} needs daily values",
+                    )
+
+
+def _coverage(one: SeriesFacts, grid: AnalysisGrid) -> Iterator[Problem]:
+    covered = one.covers(grid)
+    if covered.all():
+        return
+    (south, north), (west, east) = (
+        axis.edges[[0, -1]] for axis in (one.series.lat, one.series.lon)
+    )
+    yield _problem(
+        one,
+        f"{one.variable} of {one.simulation} lies from {south:g} to {north:g} degrees north and "
+        f"{west:g} to {east:g} degrees east, which leaves {np.sum(~covered)} of the "
+        f"{covered.size} pixels of the analysis grid uncovered; "
+        "give larger files or a smaller grid",
+    )
+
+
+def _corrected(
+    assessment: Assessment, found: Sequence[Simulation], facts: Facts
+) -> Iterator[Problem]:
+    """Yield the variables that cannot be corrected: the reference lacks them, or their step."""
+    reference = facts.get(OBSERVED, {})
+    there = {v for s in found if s.name == OBSERVED for v in s.files}
+    for simulation in found:
+        if simulation.name == OBSERVED:
+            continue
+        try:
+            variables = series_variables(assessment, simulation.files)
+        except StookError:
+            continue
+        for variable in variables:
+            if assessment.correct.choice(variable).method == "none":
+                continue
+            where = f"{assessment.source}: reference.files"
+            if variable not in there:
+                yield Problem(
+                    "error",
+                    where,
+                    f"{variable} is missing; {simulation.name} is to be corrected with it (or set "
+                    f"correct.variables.{variable}.method to none)",
+                )
+            one, two = reference.get(variable), facts.get(simulation.name, {}).get(variable)
+            if one and two and one.series.step != two.series.step:
+                yield _problem(
+                    two,
+                    f"{variable} is {two.series.step}, that of the reference {one.series.step}; "
+                    "both need the same time step",
+                )
+
+
+def weight_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:
+    """Return the model weights that are missing or belong to no model."""
+    weights = assessment.ensemble.weights
+    if weights is None:
+        return []
+    models = {s.model for s in found if s.name != OBSERVED}
+    where = f"{assessment.source}: ensemble.weights"
+    problems = []
+    if lost := sorted(models - set(weights)):
+        problems.append(Problem("error", where, f"has no weight for {_listed(lost)}"))
+    if unknown := sorted(set(weights) - models):
+        message = f"{_listed(unknown)} is no model; models are {_listed(sorted(models))}"
+        problems.append(Problem("error", where, message))
+    return problems
+
+
+def _problem(one: SeriesFacts, message: str) -> Problem:
+    return Problem("error", str(one.path), message)
+
+
+def _listed(names: Sequence[str], most: int = 4) -> str:
+    """Return names as words: ``a``, ``a and b``, or the first few and the count of the rest."""
+    if len(names) > most:
+        return f"{', '.join(names[:most])} and {len(names) - most} more"
+    return " and ".join(filter(None, [", ".join(names[:-1]), names[-1]]))
