@@ -12,8 +12,15 @@ from scipy import sparse
 
 from stook.yields.exponential import exponential, fused
 
-DRAWS_AT_ONCE = 32
-"""Draws worked on together; any number gives the same values."""
+DRAWS_AT_ONCE = 128
+"""Most draws worked on together; any number gives the same values."""
+
+LANES = 8
+"""Draws of a block are padded to a multiple of this, for vector instructions."""
+
+
+TERMS_AT_ONCE = 4
+"""Terms added in one go; the design is padded with zeros to a multiple."""
 
 
 class DrawTotals:
@@ -44,11 +51,17 @@ class DrawTotals:
         baseline: np.ndarray,
         regions: int,
     ) -> None:
-        self._coefficients = np.ascontiguousarray(coefficients.T, dtype=np.float64)
+        self._draws, size = coefficients.shape
+        blocks = -(-self._draws // DRAWS_AT_ONCE)
+        width = _padded(-(-self._draws // blocks), LANES)
+        padded = np.zeros((blocks * width, _padded(size, TERMS_AT_ONCE)))
+        padded[: self._draws, :size] = coefficients
+        by_block = padded.reshape(blocks, width, -1).transpose(0, 2, 1)
+        self._coefficients = np.ascontiguousarray(by_block)
         self._intercept = float(intercept)
         self._log_link = bool(log_link)
         self._baseline = np.ascontiguousarray(baseline, dtype=np.bool_)
-        self._sums = np.zeros((regions, len(baseline), coefficients.shape[0]))
+        self._sums = np.zeros((regions, blocks, len(baseline), width))
 
     def add(
         self,
@@ -92,7 +105,9 @@ class DrawTotals:
     @property
     def production(self) -> np.ndarray:
         """Production so far, t, float64, shape (draw, region, year)."""
-        return np.moveaxis(self._sums, 2, 0)
+        regions, blocks, years, width = self._sums.shape
+        by_draw = self._sums.transpose(1, 3, 0, 2).reshape(blocks * width, regions, years)
+        return by_draw[: self._draws]
 
 
 def draw_totals(
@@ -122,6 +137,10 @@ def draw_totals(
     return totals.production
 
 
+def _padded(size: int, multiple: int) -> int:
+    return -(-size // multiple) * multiple
+
+
 @njit(cache=True, nogil=True)
 def _add_draws(
     design: np.ndarray,
@@ -136,51 +155,50 @@ def _add_draws(
     baseline: np.ndarray,
     sums: np.ndarray,
 ) -> None:  # pragma: no cover - compiled
-    """Add the production of pixels to `sums` (region, year, draw), pixels in order.
+    """Add the production of pixels to `sums` (region, block, year, draw), pixels in order.
 
     `starts`, `regions` and `areas` list the regions of each pixel, as in a CSR matrix.
-    `coefficients` has shape (k, draw).
+    `coefficients` has shape (block, k, draw), k padded.
     """
-    pixels, years, _ = design.shape
-    draws = coefficients.shape[1]
-    response = np.empty((years, DRAWS_AT_ONCE))
-    mean = np.empty(DRAWS_AT_ONCE)
+    pixels, years, size = design.shape
+    blocks, padded, draws = coefficients.shape
+    response = np.empty((years, draws))
+    mean = np.empty(draws)
+    terms = np.zeros((years, padded))
     for pixel in range(pixels):
         if starts[pixel] == starts[pixel + 1]:
             continue
-        terms = centred(design[pixel], valid[pixel], baseline, log_link)
-        for first in range(0, draws, DRAWS_AT_ONCE):
-            here = coefficients[:, first : first + DRAWS_AT_ONCE]
-            predict(terms, here, intercept, log_link, response)
-            baseline_means(response, valid[pixel], baseline, here.shape[1], mean)
+        centre(design[pixel], valid[pixel], baseline, log_link, terms)
+        for block in range(blocks):
+            predict(terms, coefficients[block], intercept, log_link, response)
+            baseline_means(response, valid[pixel], baseline, mean)
             for entry in range(starts[pixel], starts[pixel + 1]):
                 weight = areas[entry] * baseline_yield[pixel]
-                total = sums[regions[entry], :, first : first + DRAWS_AT_ONCE]
-                _add_one(response, mean, weight, valid[pixel], log_link, total)
+                total = sums[regions[entry], block]
+                _add_one(response, weight / mean, valid[pixel], log_link, total)
 
 
 @njit(cache=True, nogil=True)
-def centred(
-    design: np.ndarray, valid: np.ndarray, baseline: np.ndarray, log_link: bool
-) -> np.ndarray:  # pragma: no cover - compiled
-    """Return the design of one pixel, (year, k); under a log link less its baseline mean.
+def centre(
+    design: np.ndarray, valid: np.ndarray, baseline: np.ndarray, log_link: bool, terms: np.ndarray
+) -> None:  # pragma: no cover - compiled
+    """Fill `terms` (year, padded k) with the design of one pixel (year, k).
 
-    A constant cancels under a log link; taking it out keeps the exponential near one.
+    Under a log link the baseline mean of every column is taken out: a constant cancels there, and
+    the exponential stays near one.
     """
     years, size = design.shape
-    result = design.copy()
-    if not log_link:
-        return result
     for column in range(size):
-        total, count = 0.0, 0
+        middle = 0.0
+        if log_link:
+            total, count = 0.0, 0
+            for year in range(years):
+                if baseline[year] and valid[year]:
+                    total += design[year, column]
+                    count += 1
+            middle = total / count if count else np.nan
         for year in range(years):
-            if baseline[year] and valid[year]:
-                total += design[year, column]
-                count += 1
-        middle = total / count if count else np.nan
-        for year in range(years):
-            result[year, column] -= middle
-    return result
+            terms[year, column] = design[year, column] - middle
 
 
 @njit(cache=True, nogil=True)
@@ -191,27 +209,40 @@ def predict(
     log_link: bool,
     response: np.ndarray,
 ) -> None:  # pragma: no cover - compiled
-    """Fill `response` (year, draw) with exp(h) or h; terms (year, k), coefficients (k, draw)."""
+    """Fill `response` (year, draw) with exp(h) or h.
+
+    `terms` (year, k) and `coefficients` (k, draw) are padded with zeros to a multiple of
+    `TERMS_AT_ONCE`; the terms are added one after the other.
+    """
     size, draws = coefficients.shape
+    last = size - TERMS_AT_ONCE
     for year in range(terms.shape[0]):
-        for draw in range(draws):
-            response[year, draw] = 0.0 if log_link else intercept
-        for column in range(size):
-            value = terms[year, column]
-            for draw in range(draws):
-                response[year, draw] = fused(
-                    coefficients[column, draw], value, response[year, draw]
-                )
-        if log_link:
-            for draw in range(draws):
-                response[year, draw] = exponential(response[year, draw])
+        response[year, :] = 0.0 if log_link else intercept
+        for k in range(0, last + 1, TERMS_AT_ONCE):
+            x0, x1 = terms[year, k], terms[year, k + 1]
+            x2, x3 = terms[year, k + 2], terms[year, k + 3]
+            if log_link and k == last:
+                for draw in range(draws):
+                    h = fused(coefficients[k, draw], x0, response[year, draw])
+                    h = fused(coefficients[k + 1, draw], x1, h)
+                    h = fused(coefficients[k + 2, draw], x2, h)
+                    h = fused(coefficients[k + 3, draw], x3, h)
+                    response[year, draw] = exponential(h)
+            else:
+                for draw in range(draws):
+                    h = fused(coefficients[k, draw], x0, response[year, draw])
+                    h = fused(coefficients[k + 1, draw], x1, h)
+                    h = fused(coefficients[k + 2, draw], x2, h)
+                    h = fused(coefficients[k + 3, draw], x3, h)
+                    response[year, draw] = h
 
 
 @njit(cache=True, nogil=True)
 def baseline_means(
-    response: np.ndarray, valid: np.ndarray, baseline: np.ndarray, draws: int, mean: np.ndarray
+    response: np.ndarray, valid: np.ndarray, baseline: np.ndarray, mean: np.ndarray
 ) -> None:  # pragma: no cover - compiled
     """Fill `mean` (draw) with the mean over valid baseline years; NaN unless positive."""
+    draws = mean.size
     mean[:] = 0.0
     count = 0
     for year in range(valid.size):
@@ -226,17 +257,13 @@ def baseline_means(
 @njit(cache=True, nogil=True)
 def _add_one(
     response: np.ndarray,
-    mean: np.ndarray,
-    weight: float,
+    scale: np.ndarray,
     valid: np.ndarray,
     log_link: bool,
     total: np.ndarray,
 ) -> None:  # pragma: no cover - compiled
-    """Add ``weight * response / mean`` of one pixel to `total` (year, draw)."""
+    """Add ``scale * response`` of one pixel to `total` (year, draw)."""
     years, draws = total.shape
-    scale = np.empty(draws)
-    for draw in range(draws):
-        scale[draw] = weight / mean[draw]
     for year in range(years):
         if not valid[year]:
             total[year, :] = np.nan

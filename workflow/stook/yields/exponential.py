@@ -17,8 +17,8 @@ from numba.extending import intrinsic
 _PER_LOG2 = 1.4426950408889634  # 1 / log(2)
 _LOG2_HIGH = 6.93147180369123816490e-01  # log(2) in two parts: the high one has trailing zeros
 _LOG2_LOW = 1.90821492927058770002e-10
-_ROUND = 6755399441055744.0  # 1.5 * 2**52: adding it leaves the whole number in the low bits
-_BIAS = 1023  # of the exponent of a float64
+# 1.5 * 2**52, which leaves a whole number in the low bits, plus the bias of a float64's exponent
+_ROUND = 6755399441055744.0 + 1023.0
 _HIGHEST, _LOWEST = 709.0, -708.0
 
 # (exp(r) - 1 - r) / r**2 by interpolation at Chebyshev nodes of -log(2)/2..log(2)/2; the relative
@@ -35,39 +35,33 @@ _C8 = 2.7620138719733994e-07
 _C9 = 2.5100424157005067e-08
 
 
-@intrinsic
-def fused(typingcontext: Any, a: Any, b: Any, c: Any) -> Any:
-    """Return ``a * b + c`` rounded once (IEEE 754 fused multiply-add; scalar kernel)."""
-
+def _fused(typingcontext: Any, a: Any, b: Any, c: Any) -> Any:
     def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
         return builder.fma(*arguments)
 
     return types.float64(types.float64, types.float64, types.float64), generate
 
 
+fused: Any = intrinsic(_fused)
+"""``fused(a, b, c)`` is ``a * b + c`` rounded once (IEEE 754; scalar kernel)."""
+
+
 @njit(cache=True, nogil=True, inline="always")
 def exponential(x: float) -> float:  # pragma: no cover - compiled
     """Return exp(x), off by one unit in the last place at most (scalar kernel).
 
-    Above 709 it is infinite, below -708 zero; a missing value stays missing.
+    x is held within -708 to 709; a missing value stays missing. The polynomial is summed in pairs
+    (Estrin's scheme), which leaves little to wait for.
     """
-    shifted = fused(x, _PER_LOG2, _ROUND)
+    x = _HIGHEST if x > _HIGHEST else x
+    x = _LOWEST if x < _LOWEST else x
+    shifted: float = fused(x, _PER_LOG2, _ROUND)
     k = shifted - _ROUND
     r = fused(-k, _LOG2_LOW, fused(-k, _LOG2_HIGH, x))
-    p = fused(_C9, r, _C8)
-    p = fused(p, r, _C7)
-    p = fused(p, r, _C6)
-    p = fused(p, r, _C5)
-    p = fused(p, r, _C4)
-    p = fused(p, r, _C3)
-    p = fused(p, r, _C2)
-    p = fused(p, r, _C1)
-    p = fused(p, r, _C0)
-    p = 1.0 + fused(p, r * r, r)
-    power = np.int64((np.float64(shifted).view(np.int64) + _BIAS) << 52)
-    y = p * power.view(np.float64)
-    if x > _HIGHEST:
-        y = np.inf
-    if x < _LOWEST:
-        y = 0.0
-    return y
+    r2 = r * r
+    r4 = r2 * r2
+    p = fused(fused(_C9, r, _C8), r4, fused(fused(_C7, r, _C6), r2, fused(_C5, r, _C4)))
+    p = fused(p, r4, fused(fused(_C3, r, _C2), r2, fused(_C1, r, _C0)))
+    p = fused(fused(p, r, 1.0), r, 1.0)
+    power = np.int64(np.float64(shifted).view(np.int64) << 52)
+    return p * power.view(np.float64)

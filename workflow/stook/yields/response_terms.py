@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import xarray as xr
 
@@ -18,9 +20,7 @@ def term_columns(term: Term, index: np.ndarray) -> list[np.ndarray]:
     """
     match term:
         case PiecewiseLinear(knots=knots):
-            inner = [
-                np.clip(index, low, high) - low for low, high in zip(knots, knots[1:], strict=False)
-            ]
+            inner = [np.clip(index, low, high) - low for low, high in pairwise(knots)]
             last = np.maximum(index - knots[-1], 0.0)
             return [np.minimum(index, knots[0]), *inner, last]
         case Quadratic():
