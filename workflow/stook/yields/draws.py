@@ -160,7 +160,7 @@ def _add_draws(
     `starts`, `regions` and `areas` list the regions of each pixel, as in a CSR matrix.
     `coefficients` has shape (block, k, draw), k padded.
     """
-    pixels, years, size = design.shape
+    pixels, years, _ = design.shape
     blocks, padded, draws = coefficients.shape
     response = np.empty((years, draws))
     mean = np.empty(draws)
