@@ -64,17 +64,19 @@ def open_undecoded(path: Path) -> xr.Dataset:
         raise InputError(f"{path}: not a readable NetCDF file ({_reason(error)})") from None
 
 
-def read_window(path: Path, name: str, window: dict[str, slice | np.ndarray]) -> np.ndarray:
-    """Read part of a variable of an input file.
+def read_window(
+    variable: xr.Variable, path: Path, name: str, window: dict[str, slice]
+) -> np.ndarray:
+    """Read part of a variable of an input file that is open.
 
     Parameters
     ----------
-    path
-        The file.
-    name
-        The variable's name in the file.
+    variable
+        Of a dataset of `open_undecoded`; may be read in any thread while the dataset is open.
+    path, name
+        The file and the variable's name in it, for the message.
     window
-        Index, slice or indices for every dimension that is not read whole, by dimension name.
+        Slice for every dimension that is not read whole, by dimension name.
 
     Returns
     -------
@@ -86,11 +88,10 @@ def read_window(path: Path, name: str, window: dict[str, slice | np.ndarray]) ->
     InputError
         If the values cannot be read: the file is damaged or cut short.
     """
-    with open_undecoded(path) as dataset:
-        try:
-            values = dataset[name].isel(window).values
-        except (OSError, ValueError, RuntimeError, KeyError) as error:
-            raise InputError(f"{path}: {name} cannot be read ({_reason(error)})") from None
+    try:
+        values = np.asarray(variable.isel(window).values)
+    except (OSError, ValueError, RuntimeError) as error:
+        raise InputError(f"{path}: {name} cannot be read ({_reason(error)})") from None
     return values if values.dtype in (np.float32, np.float64) else values.astype(np.float64)
 
 

@@ -20,7 +20,7 @@ from stook.grids.calendars import (
     time_step,
     years_of,
 )
-from stook.grids.cf import find_variable, open_input, read_window
+from stook.grids.cf import find_variable, open_input, open_undecoded, read_window
 from stook.grids.units import linear_conversion
 
 
@@ -34,10 +34,8 @@ class SeriesFile:
         The file.
     name
         The variable's name in the file.
-    dims
-        Dimensions of the variable in the file, in their order.
     time, lat, lon
-        Which of the dimensions they are.
+        Names of the dimensions in the file.
     times
         cftime dates, shape (time,).
     unit
@@ -46,11 +44,12 @@ class SeriesFile:
         Scale and offset to the inside unit.
     axes
         Latitude and longitude.
+    dataset
+        The open file, times not decoded.
     """
 
     path: Path
     name: str
-    dims: tuple[str, ...]
     time: str
     lat: str
     lon: str
@@ -58,11 +57,19 @@ class SeriesFile:
     unit: str
     conversion: tuple[float, float]
     axes: tuple[SourceAxis, SourceAxis]
+    dataset: xr.Dataset
+
+    @property
+    def dims(self) -> tuple[str, ...]:
+        """Dimensions of the variable in the file, in their order."""
+        return tuple(map(str, self.dataset[self.name].dims))
 
 
 @dataclass(frozen=True)
 class Series:
     """A climate variable over time on one grid, from one file or many; values stay in the files.
+
+    Use it in a ``with`` block, which closes the files. It may be read in any thread.
 
     Attributes
     ----------
@@ -91,6 +98,17 @@ class Series:
     scale: float
     offset: float
     unit: str
+
+    def __enter__(self) -> Series:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Close the files."""
+        for file in self.files:
+            file.dataset.close()
 
     @property
     def calendar(self) -> str:
@@ -170,7 +188,17 @@ def open_series(files: Sequence[Path], variable: str) -> Series:
     """
     if not files:
         raise InputError(f"{variable}: no files")
-    opened = [_open_file(Path(path), variable) for path in files]
+    opened: list[SeriesFile] = []
+    try:
+        opened += (_open_file(Path(path), variable) for path in files)
+        return _joined(opened, variable)
+    except InputError:
+        for file in opened:
+            file.dataset.close()
+        raise
+
+
+def _joined(opened: list[SeriesFile], variable: str) -> Series:
     where = f"{opened[0].path}: {variable}"
     opened = [opened[i] for i in join_order([file.times for file in opened], where)]
     first = opened[0]
@@ -192,17 +220,20 @@ def _open_file(path: Path, variable: str) -> SeriesFile:
         wanted = {time_name, lat_name, lon_name}
         _check_dimensions(found, wanted, variable, path)
         unit = str(found.attrs.get("units", ""))
+        conversion = linear_conversion(unit, variable, path)
+        raw = open_undecoded(path)
+        dims = raw[str(found.name)].dims  # `open_input` calls the time dimension `time`
         return SeriesFile(
             path=path,
             name=str(found.name),
-            dims=tuple(map(str, found.dims)),
-            time=time_name,
+            time=str(dims[list(found.dims).index(time_name)]),
             lat=lat_name,
             lon=lon_name,
             times=np.atleast_1d(dataset["time"].values),
             unit=unit,
-            conversion=linear_conversion(unit, variable, path),
+            conversion=conversion,
             axes=(lat, lon),
+            dataset=raw,
         )
 
 
@@ -253,24 +284,19 @@ def _check_times(files: list[SeriesFile], times: np.ndarray) -> TimeStep:
 
 
 def _read_file(file: SeriesFile, steps: slice, rows: np.ndarray, columns: np.ndarray) -> np.ndarray:
-    order = [file.dims.index(name) for name in (file.time, file.lat, file.lon)]
-    extra = [i for i in range(len(file.dims)) if i not in order]
+    variable = file.dataset.variables[file.name]
+    dims = file.dims
+    order = [dims.index(name) for name in (file.time, file.lat, file.lon)]
+    extra = [i for i in range(len(dims)) if i not in order]
     lat, lon = file.axes
     bands = []
     for row_run, row_turn in lat.file_runs(rows):
         parts = []
         for column_run, column_turn in lon.file_runs(columns):
-            window: dict[str, slice | np.ndarray] = {
-                file.time: steps,
-                file.lat: row_run,
-                file.lon: column_run,
-            }
-            values = np.transpose(read_window(file.path, file.name, window), [*order, *extra])
+            window = {file.time: steps, file.lat: row_run, file.lon: column_run}
+            values = read_window(variable, file.path, file.name, window)
+            values = np.transpose(values, [*order, *extra])
             values = values.reshape(values.shape[:3])
-            if row_turn:
-                values = values[:, ::-1]
-            if column_turn:
-                values = values[:, :, ::-1]
-            parts.append(values)
+            parts.append(values[:, :: -1 if row_turn else 1, :: -1 if column_turn else 1])
         bands.append(parts[0] if len(parts) == 1 else np.concatenate(parts, axis=2))
     return np.ascontiguousarray(bands[0] if len(bands) == 1 else np.concatenate(bands, axis=1))
