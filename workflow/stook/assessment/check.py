@@ -8,14 +8,20 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
+from stook.assessment.areas import SystemFacts, inspect_areas
 from stook.assessment.inventory import SeriesFacts, as_problems, inspect_series, pair_problems
 from stook.assessment.load import results_folder
-from stook.assessment.requirements import response_problems, series_problems, weight_problems
+from stook.assessment.requirements import (
+    NeededPixels,
+    response_problems,
+    series_problems,
+    weight_problems,
+)
 from stook.assessment.schema import Assessment
 from stook.assessment.simulations import Simulation, observed, simulations
 from stook.assessment.variables import series_variables
 from stook.errors import Problem, StookError
-from stook.grids.analysis import AnalysisGrid, analysis_grid
+from stook.grids.analysis import analysis_grid
 
 Progress = Callable[[int, int, str], None]
 
@@ -30,12 +36,18 @@ class Check:
         `observed`, if there is a reference, and every simulation whose files were found.
     series
         Facts of every climate series that could be opened.
+    systems
+        Facts of every crop x water system whose area could be read.
+    pixels
+        Pixels of the analysis grid that would be computed.
     problems
         Errors first, then warnings, each in the order they were found.
     """
 
     simulations: list[Simulation] = field(default_factory=list)
     series: list[SeriesFacts] = field(default_factory=list)
+    systems: list[SystemFacts] = field(default_factory=list)
+    pixels: int = 0
     problems: list[Problem] = field(default_factory=list)
 
     @property
@@ -61,18 +73,28 @@ def check(assessment: Assessment, progress: Progress | None = None) -> Check:
     """
     problems: list[Problem] = list(_missing_files(assessment))
     found = _simulations(assessment, problems)
-    grid = _grid(assessment, problems)
     problems += response_problems(assessment, found)
     problems += weight_problems(assessment, found)
+    systems: list[SystemFacts] = []
+    pixels = None
+    try:
+        grid = analysis_grid(assessment)
+        systems, needed, wrong = inspect_areas(assessment, grid)
+        pixels = NeededPixels(grid, needed)
+        problems += wrong
+    except StookError as error:
+        problems += as_problems(error)
     facts = _series(assessment, found, problems, progress)
-    problems += series_problems(assessment, found, facts, grid)
+    problems += series_problems(assessment, found, facts, pixels)
     problems += _results_problems(results_folder(assessment))
     ordered = sorted(dict.fromkeys(problems), key=lambda problem: problem.severity)
-    return Check(found, [one for series in facts.values() for one in series.values()], ordered)
+    series = [one for variables in facts.values() for one in variables.values()]
+    count = int(pixels.needed.sum()) if pixels else 0
+    return Check(found, series, systems, count, ordered)
 
 
 def _missing_files(assessment: Assessment) -> Iterator[Problem]:
-    """Yield every file and pattern of the assessment that names nothing."""
+    """Yield every climate file or pattern of the assessment that names nothing."""
     spec = assessment.simulations
     named = [assessment.reference.files] if assessment.reference else []
     named += [run.files for run in spec.runs]
@@ -82,14 +104,6 @@ def _missing_files(assessment: Assessment) -> Iterator[Problem]:
                 path = assessment.folder / pattern
                 if not glob.glob(str(path), recursive=True):
                     yield Problem("error", str(path), f"no such file (for {variable})")
-    single = [assessment.regions.file]
-    for crop, system in assessment.systems:
-        one = assessment.system(crop, system)
-        layers = (one.area, one.calendar.planting, one.calendar.maturity, one.baseline_yield)
-        single += [layer.file for layer in layers if layer.file is not None]
-    for path in dict.fromkeys(assessment.path(file) for file in single):
-        if not path.exists():
-            yield Problem("error", str(path), "no such file")
 
 
 def _simulations(assessment: Assessment, problems: list[Problem]) -> list[Simulation]:
@@ -105,14 +119,6 @@ def _simulations(assessment: Assessment, problems: list[Problem]) -> list[Simula
     except StookError as error:
         problems += [p for p in as_problems(error) if p.where not in reported]
     return found
-
-
-def _grid(assessment: Assessment, problems: list[Problem]) -> AnalysisGrid | None:
-    try:
-        return analysis_grid(assessment)
-    except StookError as error:
-        problems += as_problems(error)
-        return None
 
 
 def _series(

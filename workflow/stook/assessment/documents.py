@@ -85,6 +85,8 @@ def _line(item: Any, model: type[BaseModel]) -> str:
             return f"{key}: unknown key{hint}"
         case "missing":
             return f"{key}: is required"
+        case _ if item.get("input", key) is None:
+            return f"{key}: is blank; fill it in"
         case "value_error":
             return f"{key}: {item['ctx']['error']}"
         case _:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -25,6 +26,15 @@ from stook.season.definition import (
 
 DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays)
 """Indices that cannot be taken from monthly or annual means."""
+
+
+@dataclass(frozen=True)
+class NeededPixels:
+    """The analysis grid, and where on it climate is needed, bool (lat, lon)."""
+
+    grid: AnalysisGrid
+    needed: np.ndarray
+
 
 Facts = Mapping[str, Mapping[str, SeriesFacts]]
 """Facts by simulation and variable."""
@@ -79,7 +89,10 @@ def _lacking_variable(definition: IndexDefinition, found: Sequence[Simulation]) 
 
 
 def series_problems(
-    assessment: Assessment, found: Sequence[Simulation], facts: Facts, grid: AnalysisGrid | None
+    assessment: Assessment,
+    found: Sequence[Simulation],
+    facts: Facts,
+    pixels: NeededPixels | None,
 ) -> list[Problem]:
     """Return what is wrong with the series of each simulation, taken together."""
     problems: list[Problem] = []
@@ -89,8 +102,8 @@ def series_problems(
             problems += _alike(series)
             problems += _periods(assessment, simulation.name, series)
             problems += _steps(assessment, simulation, series)
-        if grid is not None:
-            problems += [p for one in series.values() for p in _coverage(one, grid)]
+        if pixels is not None:
+            problems += [p for one in series.values() for p in _coverage(one, pixels)]
     problems += _corrected(assessment, found, facts)
     return problems
 
@@ -156,19 +169,17 @@ def _steps(
                     )
 
 
-def _coverage(one: SeriesFacts, grid: AnalysisGrid) -> Iterator[Problem]:
-    covered = one.covers(grid)
-    if covered.all():
+def _coverage(one: SeriesFacts, pixels: NeededPixels) -> Iterator[Problem]:
+    lost = pixels.needed & ~one.covers(pixels.grid)
+    if not lost.any():
         return
-    (south, north), (west, east) = (
-        axis.edges[[0, -1]] for axis in (one.series.lat, one.series.lon)
-    )
+    south, north = one.series.lat.edges[[0, -1]]
+    west, east = one.series.lon.edges[[0, -1]]
     yield _problem(
         one,
         f"{one.variable} of {one.simulation} lies from {south:g} to {north:g} degrees north and "
-        f"{west:g} to {east:g} degrees east, which leaves {np.sum(~covered)} of the "
-        f"{covered.size} pixels of the analysis grid uncovered; "
-        "give larger files or a smaller grid",
+        f"{west:g} to {east:g} degrees east, which leaves {np.sum(lost)} of "
+        f"{np.sum(pixels.needed)} pixels with crops uncovered; give larger files or a smaller grid",
     )
 
 
