@@ -120,18 +120,31 @@ class Job:
 
         `dataset` may be lazy; data and statistics come from one pass over its blocks.
         """
-        dataset = dataset.assign_attrs(self.attributes(title))
-        temporary = self.claim(path)
-        statistics = {
-            str(name): _lazy_statistics(variable.data)
-            for name, variable in dataset.data_vars.items()
-            if variable.dtype.kind in "fiu" and not str(name).endswith("_bnds")
-        }
-        writing = delayed_netcdf(dataset, temporary, codec)
-        _, values = dask.compute(writing, statistics)
-        self._outputs[path]["variables"] = {
-            name: _statistics(*map(float, value)) for name, value in values.items()
-        }
+        self.netcdf_files([(dataset, path, title, codec)])
+
+    def netcdf_files(self, files: Iterable[tuple[xr.Dataset, Path, str, Codec]]) -> None:
+        """Write several datasets as `netcdf` does; blocks they share are computed once.
+
+        Parameters
+        ----------
+        files
+            Dataset, path, title and codec of each.
+        """
+        writing, statistics = [], {}
+        for dataset, path, title, codec in files:
+            temporary = self.claim(path)
+            complete = dataset.assign_attrs(self.attributes(title))
+            statistics[path] = {
+                str(name): _lazy_statistics(variable.data)
+                for name, variable in complete.data_vars.items()
+                if variable.dtype.kind in "fiu" and not str(name).endswith("_bnds")
+            }
+            writing.append(delayed_netcdf(complete, temporary, codec))
+        _, found = dask.compute(writing, statistics)
+        for path, values in found.items():
+            self._outputs[path]["variables"] = {
+                name: _statistics(*map(float, value)) for name, value in values.items()
+            }
 
     def table(self, frame: pd.DataFrame, path: Path) -> None:
         """Write a table as Parquet or CSV, by suffix."""

@@ -1,0 +1,209 @@
+"""Empirical distributions of day-of-year windows, and ranks within them (plain arrays, compiled).
+
+A series is sorted once, the whole of it. Its values are then dealt out in ascending order: each
+goes to the end of every window it belongs to, so all windows fill up sorted. In the same way the
+rank of a value among the values of its own window is the number that the window has been dealt
+so far. Neither needs a comparison. See docs/correct.md for the cost and the proof.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit
+
+from stook.correct.kernels_order import KEY, PLACE
+
+LANES = 8
+"""Counts are raised in groups of this many, which compiles to one vector instruction."""
+
+
+class Calibration(NamedTuple):
+    """Which windows each value of a calibration series belongs to.
+
+    Attributes
+    ----------
+    first, number
+        It belongs to windows ``first .. first + number - 1`` on a circle, int32, shape (time,).
+    wrap
+        Window of a number that ran past the last, int32, shape (2 * windows,).
+    windows, largest
+        Number of windows, and of values in the largest.
+    """
+
+    first: np.ndarray
+    number: np.ndarray
+    wrap: np.ndarray
+    windows: int
+    largest: int
+
+
+class Application(NamedTuple):
+    """Which windows of days and years each value of a series to correct belongs to.
+
+    Values with the same windows share a cell. A slot is a window of days and a window of years,
+    ``slot = years * windows + days``.
+
+    Attributes
+    ----------
+    cell
+        Cell of each value, int32, shape (time,).
+    slot
+        Slot whose distribution the values of a cell are ranked in, int32, shape (cell,).
+    window
+        The window of days of that slot, int32, shape (cell,).
+    tally
+        Place of the slot in the table of counts, int32, shape (cell,).
+    first
+        Where the counts of the cell's windows start in the table of counts, int32, shape (cell,).
+    number, rows
+        Number of windows of days and of years, int32, shape (cell,).
+    raise_by
+        Ones for as many windows as `number`, then zeros; int32, shape (number + 1, lanes).
+    windows, years, stride
+        Number of windows of days and of years; length of a row of the table of counts.
+    """
+
+    cell: np.ndarray
+    slot: np.ndarray
+    window: np.ndarray
+    tally: np.ndarray
+    first: np.ndarray
+    number: np.ndarray
+    rows: np.ndarray
+    raise_by: np.ndarray
+    windows: int
+    years: int
+    stride: int
+
+
+@njit(cache=True, nogil=True)
+def deal_to_windows(values, packed, count, plan, windows, sizes):
+    """Fill the windows of a calibration series with its values in ascending order.
+
+    Parameters
+    ----------
+    values
+        The series, shape (time,).
+    packed, count
+        From `sort_places`.
+    plan
+        Its `Calibration`.
+    windows
+        Filled: shape (windows, largest + 1); after the last value it is repeated once.
+    sizes
+        Filled: number of values in each window, int64, shape (windows,).
+    """
+    sizes[:] = 0
+    for i in range(count):
+        place = packed[i] & PLACE
+        value = values[place]
+        first = plan.first[place]
+        for number in range(first, first + plan.number[place]):
+            window = plan.wrap[number]
+            windows[window, sizes[window]] = value
+            sizes[window] += 1
+    for window in range(plan.windows):
+        if sizes[window]:
+            windows[window, sizes[window]] = windows[window, sizes[window] - 1]
+
+
+@njit(cache=True, nogil=True, inline="always")
+def value_at(window, size, position):
+    """Return the quantile at a Hazen position of a sorted window (1 is the lowest value).
+
+    Linear between values, constant beyond the ends; `window` holds its last value twice.
+    """
+    place = min(max(position, 1.0), float(size))
+    below = int(place)
+    low = float(window[below - 1])
+    return low + (place - below) * (float(window[below]) - low)
+
+
+@njit(cache=True, nogil=True)
+def thin_windows(windows, sizes, nodes, scratch):
+    """Reduce every window to its quantiles at probabilities ``(j - 0.5) / nodes``, in place.
+
+    A window that has no more values than nodes stays as it is. `scratch` has shape (nodes,).
+    """
+    for window in range(sizes.size):
+        size = sizes[window]
+        if size <= nodes:
+            continue
+        row = windows[window]
+        for node in range(nodes):
+            position = (node + 0.5) / nodes * size + 0.5
+            scratch[node] = value_at(row, size, position)
+        row[:nodes] = scratch[:nodes]
+        row[nodes] = scratch[nodes - 1]
+        sizes[window] = nodes
+
+
+@njit(cache=True, nogil=True)
+def rank_in_windows(values, packed, count, plan, counts, ranks):
+    """Rank every value among the values of its own slot; equal values share their middle rank.
+
+    Parameters
+    ----------
+    values
+        The series, shape (time,).
+    packed, count
+        From `sort_places`.
+    plan
+        Its `Application`.
+    counts
+        Table of counts, int32, shape (years * stride,); left with the totals.
+    ranks
+        Filled where there is a value: twice the rank, int32, shape (time,).
+    """
+    counts[:] = 0
+    i = 0
+    while i < count:
+        place = packed[i] & PLACE
+        end = i + 1
+        key = packed[i] >> KEY
+        while end < count and packed[end] >> KEY == key:
+            if values[packed[end] & PLACE] != values[place]:
+                break
+            end += 1
+        if end == i + 1:
+            cell = plan.cell[place]
+            ranks[place] = 2 * _read(counts, plan, cell) + 2
+            _raise(counts, plan, cell)
+        else:
+            for j in range(i, end):
+                other = packed[j] & PLACE
+                ranks[other] = _read(counts, plan, plan.cell[other])
+            for j in range(i, end):
+                _raise(counts, plan, plan.cell[packed[j] & PLACE])
+            for j in range(i, end):
+                other = packed[j] & PLACE
+                ranks[other] += _read(counts, plan, plan.cell[other]) + 1
+        i = end
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _read(counts, plan, cell):
+    at = plan.tally[cell]
+    return counts[at] + counts[at + plan.windows]
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _raise(counts, plan, cell):
+    start = plan.first[cell]
+    number = plan.number[cell]
+    for _ in range(plan.rows[cell]):
+        for group in range(0, number, LANES):
+            for lane in range(LANES):
+                counts[start + group + lane] += plan.raise_by[number, group + lane]
+        start += plan.stride
+
+
+@njit(cache=True, nogil=True)
+def slot_sizes(counts, plan, sizes):
+    """Read the number of values of every slot from the table of counts, int64, shape (slots,)."""
+    for years in range(plan.years):
+        for window in range(plan.windows):
+            at = years * plan.stride + window
+            sizes[years * plan.windows + window] = counts[at] + counts[at + plan.windows]
