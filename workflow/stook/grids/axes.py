@@ -136,5 +136,6 @@ def _axis(
         )
     tolerance = made.tolerance
     if axis.dtype.itemsize < 8:
-        tolerance = max(tolerance, 2 * float(np.spacing(np.float32(np.abs(centres).max()))))
+        largest = np.float32(np.abs(axis.values).max())
+        tolerance = max(tolerance, 2 * float(np.spacing(largest)))
     return SourceAxis(centres, edges, descending, made.cyclic, tolerance)

@@ -122,15 +122,16 @@ def _numbers(series: Series, date: Any) -> int:
     return int(step_number(np.array([date]), series.step)[0])
 
 
-def prepared_times(series: Series, steps: slice) -> np.ndarray:
+def time_coordinate(series: Series, steps: slice) -> xr.Variable:
     """Return the time stamps of prepared data: noon of each day; months and years as they are."""
-    if series.step != "daily":
-        return series.times[steps]
-    return np.asarray(
-        cftime.num2date(
-            series.numbers[steps] + 0.5, "days since 1850-01-01", calendar=series.calendar
-        )
-    )
+    times = series.times[steps]
+    if series.step == "daily":
+        noon = series.numbers[steps] + 0.5
+        times = cftime.num2date(noon, "days since 1850-01-01", calendar=series.calendar)
+    attributes = {"standard_name": "time", "long_name": "time", "axis": "T"}
+    if series.calendar in ("standard", "proleptic_gregorian", "julian"):
+        attributes["units_metadata"] = "leap_seconds: none"
+    return xr.Variable("time", np.asarray(times), attributes)
 
 
 def prepare_series(

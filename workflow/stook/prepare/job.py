@@ -14,7 +14,7 @@ from stook.audit.ledger import Job
 from stook.errors import InputError
 from stook.grids.analysis import AnalysisGrid, analysis_grid, tile_count
 from stook.grids.files import open_result
-from stook.prepare.climate import common_steps, prepare_series, prepared_times
+from stook.prepare.climate import common_steps, prepare_series, time_coordinate
 from stook.prepare.layers import SystemLayers, crop_layers
 from stook.prepare.rasters import Number, Raster, open_raster
 from stook.prepare.resample import YIELD_UNIT, area_on_grid, calendar_on_grid, yield_on_grid
@@ -75,19 +75,15 @@ def tile(assessment: Assessment, simulation: str, tile: str) -> None:
                 one.variable: prepare_series(one, part, grid, computed, block_mb)
                 for one, part in zip(series, steps, strict=True)
             },
-            coords={
-                "time": ("time", prepared_times(series[0], steps[0]), _TIME),
-                **grid.coordinates(),
-            },
+            coords={"time": time_coordinate(series[0], steps[0]), **grid.coordinates()},
             attrs={"time_step": series[0].step, "simulation": simulation},
         )
-        title = f"Climate of {simulation} on the analysis grid"
         job.netcdf(
-            dataset, layout.prepared(simulation, int(tile)), title, assessment.store.daily_codec
+            dataset,
+            layout.prepared(simulation, int(tile)),
+            f"Climate of {simulation} on the analysis grid",
+            assessment.store.daily_codec,
         )
-
-
-_TIME = {"standard_name": "time", "long_name": "time", "axis": "T"}
 
 
 def _layers(assessment: Assessment) -> list[Layer]:
