@@ -235,7 +235,7 @@ def _grids(
     marks = ((heat < 20) | (heat > 95)) + 2 * ((rain < 300) | (rain > 520)).astype(np.int16)
     central = pixels.coefficients(system, 0).iloc[0]
     h = central["heat"] * heat + central["rain.1"] * rain + central["rain.2"] * rain**2
-    base = YEARS <= BASELINE[1]
+    base = np.isin(YEARS, np.arange(BASELINE[0], BASELINE[1] + 1))
     ratio = np.exp(h) if system == "rainfed" else np.maximum(3.0 + h, 0)
     mean = ratio[base].mean(axis=0) if system == "rainfed" else (3.0 + h)[base].mean(axis=0)
     ratio = ratio / mean

@@ -234,11 +234,10 @@ def members_table(group: Group, horizon: str, changes: Changes) -> pd.DataFrame:
     that have a value in a region sum to 1.
     """
     grown = group.grown()
-    simulations, draws, _ = changes.change.shape
-    weights = np.empty((simulations, len(grown)))
-    for place, (region, _) in enumerate(grown):
+    weights = np.empty((len(group.simulations), len(grown)))
+    for column, (region, _) in enumerate(grown):
         there = np.isfinite(changes.change[..., region]).any(axis=1)
-        weights[:, place] = simulation_weights(there, group.models.number, group.models.weight)
+        weights[:, column] = simulation_weights(there, group.models.number, group.models.weight)
     change = changes.change[..., [region for region, _ in grown]]
     whole = np.ascontiguousarray(np.moveaxis(change, 2, 0))  # (region, simulation, draw)
     kept = np.flatnonzero(np.isfinite(whole.ravel()))
@@ -266,7 +265,8 @@ def _chosen(names: list[str], places: np.ndarray) -> Any:
     """Return names by place as a categorical, which keeps a long table small."""
     unique = list(dict.fromkeys(names))
     number = np.array([unique.index(name) for name in names], dtype=np.int64)
-    return pd.Categorical.from_codes(number[places], unique)
+    codes = np.asarray(number[places], dtype=np.int64)
+    return pd.Categorical.from_codes(codes, categories=pd.Index(unique))
 
 
 def stacked_members(parts: Sequence[pd.DataFrame]) -> pd.DataFrame:

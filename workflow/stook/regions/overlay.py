@@ -142,9 +142,8 @@ def overlapping(regions: Regions4326) -> list[tuple[str, str, float]]:
 def region_problems(assessment: Assessment) -> list[Problem]:
     """Return what is wrong with the region polygons and how they lie on the analysis grid.
 
-    Errors are those of `stook.regions.polygons.examine_regions`, and a region asked for, or every
-    region, off the grid. Warnings: regions that overlap, that reach beyond the grid, or lie off
-    it.
+    Errors are those of `stook.regions.polygons.examine_regions`, and a region off the grid, of
+    those asked for. Warnings: regions that overlap, or that reach beyond the grid.
 
     Raises
     ------
@@ -165,8 +164,11 @@ def region_problems(assessment: Assessment) -> list[Problem]:
     uncovered = [_uncovered(shape, full) for shape in regions.shapes]
     for name, share in zip(regions.names, uncovered, strict=True):
         if share >= 1 - 1e-9:
-            fatal = name in assessment.subset or min(uncovered) >= 1 - 1e-9
-            text = f"region {name!r} lies off the analysis grid; extend grid, or leave it out"
+            fatal = not assessment.subset or name in assessment.subset
+            text = (
+                f"region {name!r} lies off the analysis grid; "
+                "extend grid, or leave it out with regions.only"
+            )
             problems.append(Problem("error" if fatal else "warning", path, text))
         elif share > _UNCOVERED:
             text = f"{100 * share:.3g} % of region {name!r} lies off the analysis grid"
