@@ -104,12 +104,12 @@ def _decode_times(raw: xr.Dataset, path: Path) -> xr.Dataset:
     if "since" not in units:
         raise InputError(f"{path}: {time} has no units like 'days since 1850-01-01'")
     calendar = calendar_name(str(attributes.get("calendar", "standard")), path)
-    encoded = xr.Variable(
-        raw[time].dims, _middle(raw, time), {"units": units, "calendar": calendar}
-    )
     try:
+        encoded = xr.Variable(
+            raw[time].dims, _middle(raw, time), {"units": units, "calendar": calendar}
+        )
         dates = xr.decode_cf(xr.Dataset({"t": encoded}), decode_times=CF_TIME)["t"].values
-    except (ValueError, OverflowError) as error:
+    except (ValueError, OverflowError, OSError, RuntimeError) as error:
         raise InputError(f"{path}: {time} cannot be decoded ({_reason(error)})") from None
     renamed = raw if time == "time" else raw.rename({time: "time"})
     return renamed.assign_coords(time=(renamed["time"].dims, dates))
