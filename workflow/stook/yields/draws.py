@@ -10,17 +10,14 @@ import numpy as np
 from numba import njit
 from scipy import sparse
 
-from stook.yields.exponential import exponential, fused
+from stook.yields.exponential import fused
+from stook.yields.kernels import TERMS_AT_ONCE, baseline_means, centre, padded, predict
 
 DRAWS_AT_ONCE = 128
 """Most draws worked on together; any number gives the same values."""
 
 LANES = 8
 """Draws of a block are padded to a multiple of this, for vector instructions."""
-
-
-TERMS_AT_ONCE = 4
-"""Terms added in one go; the design is padded with zeros to a multiple."""
 
 
 class DrawTotals:
@@ -53,10 +50,10 @@ class DrawTotals:
     ) -> None:
         self._draws, size = coefficients.shape
         blocks = -(-self._draws // DRAWS_AT_ONCE)
-        width = _padded(-(-self._draws // blocks), LANES)
-        padded = np.zeros((blocks * width, _padded(size, TERMS_AT_ONCE)))
-        padded[: self._draws, :size] = coefficients
-        by_block = padded.reshape(blocks, width, -1).transpose(0, 2, 1)
+        width = padded(-(-self._draws // blocks), LANES)
+        filled = np.zeros((blocks * width, padded(size, TERMS_AT_ONCE)))
+        filled[: self._draws, :size] = coefficients
+        by_block = filled.reshape(blocks, width, -1).transpose(0, 2, 1)
         self._coefficients = np.ascontiguousarray(by_block)
         self._intercept = float(intercept)
         self._log_link = bool(log_link)
@@ -137,10 +134,6 @@ def draw_totals(
     return totals.production
 
 
-def _padded(size: int, multiple: int) -> int:
-    return -(-size // multiple) * multiple
-
-
 @njit(cache=True, nogil=True)
 def _add_draws(
     design: np.ndarray,
@@ -161,10 +154,10 @@ def _add_draws(
     `coefficients` has shape (block, k, draw), k padded.
     """
     pixels, years, _ = design.shape
-    blocks, padded, draws = coefficients.shape
+    blocks, columns, draws = coefficients.shape
     response = np.empty((years, draws))
     mean = np.empty(draws)
-    terms = np.zeros((years, padded))
+    terms = np.zeros((years, columns))
     for pixel in range(pixels):
         if starts[pixel] == starts[pixel + 1]:
             continue
@@ -176,82 +169,6 @@ def _add_draws(
                 weight = areas[entry] * baseline_yield[pixel]
                 total = sums[regions[entry], block]
                 _add_one(response, weight / mean, valid[pixel], log_link, total)
-
-
-@njit(cache=True, nogil=True)
-def centre(
-    design: np.ndarray, valid: np.ndarray, baseline: np.ndarray, log_link: bool, terms: np.ndarray
-) -> None:  # pragma: no cover - compiled
-    """Fill `terms` (year, padded k) with the design of one pixel (year, k).
-
-    Under a log link the baseline mean of every column is taken out: a constant cancels there, and
-    the exponential stays near one.
-    """
-    years, size = design.shape
-    for column in range(size):
-        middle = 0.0
-        if log_link:
-            total, count = 0.0, 0
-            for year in range(years):
-                if baseline[year] and valid[year]:
-                    total += design[year, column]
-                    count += 1
-            middle = total / count if count else np.nan
-        for year in range(years):
-            terms[year, column] = design[year, column] - middle
-
-
-@njit(cache=True, nogil=True)
-def predict(
-    terms: np.ndarray,
-    coefficients: np.ndarray,
-    intercept: float,
-    log_link: bool,
-    response: np.ndarray,
-) -> None:  # pragma: no cover - compiled
-    """Fill `response` (year, draw) with exp(h) or h.
-
-    `terms` (year, k) and `coefficients` (k, draw) are padded with zeros to a multiple of
-    `TERMS_AT_ONCE`; the terms are added one after the other.
-    """
-    size, draws = coefficients.shape
-    last = size - TERMS_AT_ONCE
-    for year in range(terms.shape[0]):
-        response[year, :] = 0.0 if log_link else intercept
-        for k in range(0, last + 1, TERMS_AT_ONCE):
-            x0, x1 = terms[year, k], terms[year, k + 1]
-            x2, x3 = terms[year, k + 2], terms[year, k + 3]
-            if log_link and k == last:
-                for draw in range(draws):
-                    h = fused(coefficients[k, draw], x0, response[year, draw])
-                    h = fused(coefficients[k + 1, draw], x1, h)
-                    h = fused(coefficients[k + 2, draw], x2, h)
-                    h = fused(coefficients[k + 3, draw], x3, h)
-                    response[year, draw] = exponential(h)
-            else:
-                for draw in range(draws):
-                    h = fused(coefficients[k, draw], x0, response[year, draw])
-                    h = fused(coefficients[k + 1, draw], x1, h)
-                    h = fused(coefficients[k + 2, draw], x2, h)
-                    h = fused(coefficients[k + 3, draw], x3, h)
-                    response[year, draw] = h
-
-
-@njit(cache=True, nogil=True)
-def baseline_means(
-    response: np.ndarray, valid: np.ndarray, baseline: np.ndarray, mean: np.ndarray
-) -> None:  # pragma: no cover - compiled
-    """Fill `mean` (draw) with the mean over valid baseline years; NaN unless positive."""
-    draws = mean.size
-    mean[:] = 0.0
-    count = 0
-    for year in range(valid.size):
-        if baseline[year] and valid[year]:
-            count += 1
-            for draw in range(draws):
-                mean[draw] += response[year, draw]
-    for draw in range(draws):
-        mean[draw] = mean[draw] / count if count and mean[draw] > 0.0 else np.nan
 
 
 @njit(cache=True, nogil=True)

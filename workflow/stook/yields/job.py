@@ -1,0 +1,71 @@
+"""Jobs of the yields stage: files in and out."""
+
+from __future__ import annotations
+
+from contextlib import ExitStack
+
+import numpy as np
+import xarray as xr
+
+from stook.assessment.layout import Layout
+from stook.assessment.schema import Assessment
+from stook.assessment.variables import system_response
+from stook.audit.ledger import Job
+from stook.constants import CENTRAL_DRAW
+from stook.grids.analysis import AnalysisGrid, tile_count
+from stook.grids.files import open_result, pixel_chunks, read_table
+from stook.yields.coefficients import coefficient_draws
+from stook.yields.grids import yield_grids
+
+_COPIES = 6
+"""Arrays of 4 bytes a value that a block holds per index, year and pixel, about."""
+
+
+def coefficients(assessment: Assessment, crop: str, system: str) -> None:
+    """Write the draws of the response coefficients of one crop and water system.
+
+    Reads the response document; writes `Layout.coefficients`.
+    """
+    source = assessment.path(assessment.system(crop, system).response)
+    wildcards = {"crop": crop, "system": system}
+    with Job(assessment, "yields_coefficients", [source], wildcards) as job:
+        response = system_response(assessment, crop, system)
+        draws = coefficient_draws(response, assessment.ensemble.draws, assessment.seed)
+        job.table(draws, Layout.of(assessment).coefficients(crop, system))
+
+
+def grid(assessment: Assessment, simulation: str, crop: str, system: str) -> None:
+    """Write the yields of one simulation, crop and water system, all tiles joined.
+
+    Reads the season indices, the central coefficients, the response and the crop layers; writes
+    `Layout.yields`.
+    """
+    layout = Layout.of(assessment)
+    tiles = [layout.season(simulation, crop, system, t) for t in range(tile_count(assessment))]
+    source = assessment.path(assessment.system(crop, system).response)
+    table = layout.coefficients(crop, system)
+    wildcards = {"simulation": simulation, "crop": crop, "system": system}
+    parents = [*tiles, table, source, layout.layers]
+    with Job(assessment, "yields_grid", parents, wildcards) as job, ExitStack() as stack:
+        response = system_response(assessment, crop, system)
+        layers = stack.enter_context(open_result(layout.layers))
+        parts = [stack.enter_context(open_result(path)) for path in tiles]
+        size = _COPIES * parts[0].sizes["year"] * len(response.coefficient_names)
+        block = assessment.store.block_mb
+        parts = [part.chunk(pixel_chunks(part, block, size)) for part in parts]
+        season = (
+            xr.concat(parts, "lat", data_vars="minimal", join="exact") if parts[1:] else parts[0]
+        )
+        here = layers.sel(crop_system=f"{crop}_{system}")
+        draws = read_table(table).set_index("draw")
+        grids = yield_grids(
+            season,
+            here["baseline_yield"],
+            here["reason"],
+            response,
+            draws.loc[CENTRAL_DRAW, response.coefficient_names].to_numpy(dtype=np.float64),
+            assessment.periods.baseline,
+        )
+        grids = grids.assign_coords(AnalysisGrid.from_dataset(layers).coordinates())
+        title = f"Yields of {crop}, {system}, {simulation}"
+        job.netcdf(grids, layout.yields(simulation, crop, system), title)
