@@ -4,12 +4,12 @@
 #
 # The same as `stook run FILE`; see docs/command-line.md. Rules are in rules/<stage>.smk.
 from snakemake.utils import min_version
-from stook.engine.plan import Plan
-from stook.engine.start import start
+from stook.engine.start import checked_plan, start
 
 min_version("9.0")
 
-PLAN = Plan.from_config(config)
+# Nothing is written, and nothing computed, when the check finds an error.
+PLAN, WARNINGS = checked_plan(config, workflow.is_main_process)
 
 
 workdir: PLAN.root
@@ -73,4 +73,4 @@ rule report:
 
 
 onstart:
-    start(PLAN, config)
+    start(PLAN, WARNINGS)

@@ -195,12 +195,10 @@ def _compute(assessment: Assessment, found: Check, request: Request) -> None:
     from stook.assessment.layout import Layout
     from stook.engine import run as engine
     from stook.engine.plan import Plan
-    from stook.engine.start import CHECKED, save_problems, start
+    from stook.engine.start import start
 
     plan = Plan(assessment)
-    engine.prepare_folder(plan.root)
-    save_problems(plan.root, found.problems)
-    start(plan, {CHECKED: True})
+    start(plan, found.problems)
     count = engine.run(plan, request, OUT)
     jobs = f"{count} job{'s' if count != 1 else ''} done"
     OUT.print(jobs if count else "everything is up to date")

@@ -49,15 +49,15 @@ class SystemFacts:
 
 def inspect_areas(
     assessment: Assessment, grid: AnalysisGrid
-) -> tuple[list[SystemFacts], np.ndarray, list[Problem]]:
+) -> tuple[list[SystemFacts], np.ndarray | None, list[Problem]]:
     """Lay crop layers and regions over the analysis grid.
 
     Returns
     -------
     list of SystemFacts
         The systems whose area could be read.
-    ndarray
-        bool (lat, lon): pixels that would be computed; all if areas or regions are not known.
+    ndarray or None
+        bool (lat, lon): pixels that would be computed; None if areas or regions are not known.
     list of Problem
         Layers that cannot be read, crop area without calendar or yield, faulty polygons, and
         regions without crop.
@@ -70,16 +70,15 @@ def inspect_areas(
         systems += [facts] if facts else []
     wrong = region_problems(assessment)
     problems += wrong
-    needed = np.ones(grid.shape, dtype=bool)
-    if len(systems) == len(assessment.systems):
-        needed = np.any([one.hectares > 0 for one in systems], axis=0)
-        if not any(problem.severity == "error" for problem in wrong):
-            regions = read_regions(assessment).chosen(assessment.subset)
-            hectares = np.sum([one.hectares for one in systems], axis=0)
-            shares = [coverage(shape, grid.lat_edges, grid.lon_edges) for shape in regions.shapes]
-            problems += _regions_without_crop(assessment, regions, shares, hectares)
-            if assessment.subset:
-                needed &= np.any([share > 0 for share in shares], axis=0)
+    if len(systems) < len(assessment.systems) or any(p.severity == "error" for p in wrong):
+        return systems, None, problems
+    hectares = np.sum([one.hectares for one in systems], axis=0)
+    regions = read_regions(assessment).chosen(assessment.subset)
+    shares = [coverage(shape, grid.lat_edges, grid.lon_edges) for shape in regions.shapes]
+    problems += _regions_without_crop(assessment, regions, shares, hectares)
+    needed = hectares > 0
+    if assessment.subset:
+        needed &= np.any([share > 0 for share in shares], axis=0)
     return systems, needed, problems
 
 

@@ -80,7 +80,7 @@ def check(assessment: Assessment, progress: Progress | None = None) -> Check:
     try:
         grid = analysis_grid(assessment)
         systems, needed, wrong = inspect_areas(assessment, grid)
-        pixels = NeededPixels(grid, needed)
+        pixels = None if needed is None else NeededPixels(grid, needed)
         problems += wrong
     except StookError as error:
         problems += as_problems(error)

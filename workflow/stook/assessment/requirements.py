@@ -85,7 +85,8 @@ def _lacking_variable(definition: IndexDefinition, found: Sequence[Simulation]) 
         return None
     needed = needed_variables(definition)
     lost = [v for v in needed if v not in without[0].files] or list(needed)
-    return f"needs {_listed(lost)}, which {_listed([s.name for s in without])} has not"
+    names = [s.name for s in without]
+    return f"needs {_listed(lost)}; {_listed(names)} {'has' if len(names) == 1 else 'have'} none"
 
 
 def series_problems(
@@ -103,7 +104,7 @@ def series_problems(
             problems += _periods(assessment, simulation.name, series)
             problems += _steps(assessment, simulation, series)
         if pixels is not None:
-            problems += [p for one in series.values() for p in _coverage(one, pixels)]
+            problems += _coverage(series, pixels)
     problems += _corrected(assessment, found, facts)
     return problems
 
@@ -125,28 +126,27 @@ def _alike(series: Mapping[str, SeriesFacts]) -> Iterator[Problem]:
 def _periods(
     assessment: Assessment, name: str, series: Mapping[str, SeriesFacts]
 ) -> Iterator[Problem]:
-    """Yield the periods that the years common to all variables do not cover."""
+    """Yield the periods that the whole years of a simulation's variables do not cover."""
     wanted = {"periods.baseline": assessment.periods.baseline}
     if assessment.correct.calibration:
         wanted["correct.calibration"] = assessment.correct.calibration
+    if assessment.periods.span:
+        wanted["periods.span"] = assessment.periods.span
     if name != OBSERVED:
         for horizon, years in assessment.periods.horizons.items():
             wanted[f"periods.horizons.{horizon}"] = years
+    alike: dict[tuple[int, int], list[SeriesFacts]] = {}
     for one in series.values():
-        for key, (first, last) in wanted.items():
-            if first >= one.years[0] and last <= one.years[1]:
-                continue
-            yield _problem(one, f"{_whole_years(one)}; {key} needs {first} to {last}")
-        if assessment.periods.span and name != OBSERVED:
-            first, last = assessment.periods.span
-            if first < one.years[0] or last > one.years[1]:
-                yield _problem(one, f"{_whole_years(one)}; periods.span is {first} to {last}")
-
-
-def _whole_years(one: SeriesFacts) -> str:
-    first, last = one.years
-    held = f"the whole years {first} to {last}" if first <= last else "no whole year"
-    return f"{one.variable} of {one.simulation} covers {held}"
+        alike.setdefault(one.years, []).append(one)
+    for (first, last), variables in alike.items():
+        names = _listed([one.variable for one in variables])
+        verb = "covers" if len(variables) == 1 else "cover"
+        held = f"the whole years {first} to {last}" if first <= last else "no whole year"
+        for key, (start, end) in wanted.items():
+            if start < first or end > last:
+                yield _problem(
+                    variables[0], f"{names} of {name} {verb} {held}; {key} needs {start} to {end}"
+                )
 
 
 def _steps(
@@ -169,26 +169,32 @@ def _steps(
                     )
 
 
-def _coverage(one: SeriesFacts, pixels: NeededPixels) -> Iterator[Problem]:
-    lost = pixels.needed & ~one.covers(pixels.grid)
-    if not lost.any():
-        return
-    south, north = one.series.lat.edges[[0, -1]]
-    west, east = one.series.lon.edges[[0, -1]]
-    yield _problem(
-        one,
-        f"{one.variable} of {one.simulation} lies from {south:g} to {north:g} degrees north and "
-        f"{west:g} to {east:g} degrees east, which leaves {np.sum(lost)} of "
-        f"{np.sum(pixels.needed)} pixels with crops uncovered; give larger files or a smaller grid",
-    )
+def _coverage(series: Mapping[str, SeriesFacts], pixels: NeededPixels) -> Iterator[Problem]:
+    alike: dict[str, list[SeriesFacts]] = {}
+    for one in series.values():
+        lost = int(np.sum(pixels.needed & ~one.covers(pixels.grid)))
+        if lost:
+            south, north = one.series.lat.edges[[0, -1]]
+            west, east = one.series.lon.edges[[0, -1]]
+            text = (
+                f"latitude {south:g} to {north:g} and longitude {west:g} to {east:g}; {lost} of "
+                f"{np.sum(pixels.needed)} pixels with crops lie outside; "
+                "give larger files, or a smaller grid"
+            )
+            alike.setdefault(text, []).append(one)
+    for text, variables in alike.items():
+        names = _listed([one.variable for one in variables])
+        verb = "covers" if len(variables) == 1 else "cover"
+        yield _problem(variables[0], f"{names} of {variables[0].simulation} {verb} {text}")
 
 
 def _corrected(
     assessment: Assessment, found: Sequence[Simulation], facts: Facts
 ) -> Iterator[Problem]:
     """Yield the variables that cannot be corrected: the reference lacks them, or their step."""
-    reference = facts.get(OBSERVED, {})
-    there = {v for s in found if s.name == OBSERVED for v in s.files}
+    if assessment.reference is None:
+        return
+    lacking: dict[str, list[str]] = {}
     for simulation in found:
         if simulation.name == OBSERVED:
             continue
@@ -199,21 +205,23 @@ def _corrected(
         for variable in variables:
             if assessment.correct.choice(variable).method == "none":
                 continue
-            where = f"{assessment.source}: reference.files"
-            if variable not in there:
-                yield Problem(
-                    "error",
-                    where,
-                    f"{variable} is missing; {simulation.name} is to be corrected with it (or set "
-                    f"correct.variables.{variable}.method to none)",
-                )
-            one, two = reference.get(variable), facts.get(simulation.name, {}).get(variable)
+            if variable not in assessment.reference.files:
+                lacking.setdefault(variable, []).append(simulation.name)
+            one = facts.get(OBSERVED, {}).get(variable)
+            two = facts.get(simulation.name, {}).get(variable)
             if one and two and one.series.step != two.series.step:
                 yield _problem(
                     two,
                     f"{variable} is {two.series.step}, that of the reference {one.series.step}; "
                     "both need the same time step",
                 )
+    for variable, names in lacking.items():
+        yield Problem(
+            "error",
+            f"{assessment.source}: reference.files",
+            f"has no {variable}, which {_listed(names)} {'has' if len(names) == 1 else 'have'}; "
+            f"give it, or set correct.variables.{variable}.method to none",
+        )
 
 
 def weight_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:

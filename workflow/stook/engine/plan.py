@@ -72,10 +72,7 @@ class Plan:
         AssessmentError
             If the assessment is not given or not valid.
         """
-        if "assessment" not in config:
-            raise AssessmentError("no assessment given; add --config assessment=FILE")
-        overrides, regions = (_list(config.get(key)) for key in ("set", "region"))
-        return cls(load_assessment(config["assessment"], overrides, regions))
+        return cls(assessment_of(config))
 
     @property
     def name(self) -> str:
@@ -284,6 +281,14 @@ class Plan:
     def _systems(self, wildcards: Wildcards) -> list[str]:
         system = wildcards.get("system")
         return [system] if system else list(self.assessment.crops[wildcards.get("crop")].systems)
+
+
+def assessment_of(config: Mapping[str, Any]) -> Assessment:
+    """Return the assessment of a Snakemake configuration; see `Plan.from_config`."""
+    if "assessment" not in config:
+        raise AssessmentError("no assessment given; add --config assessment=FILE")
+    overrides, regions = (_list(config.get(key)) for key in ("set", "region"))
+    return load_assessment(config["assessment"], overrides, regions)
 
 
 def _list(given: Any) -> list[str]:

@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from stook.assessment.load import save_resolved
-from stook.engine.plan import Plan
+from stook.engine.plan import Plan, assessment_of
 from stook.errors import Problem, ResultsError, raise_problems
 from stook.grids.files import temporary_name
 
@@ -17,20 +17,48 @@ CHECKED = "checked"
 """Key of the Snakemake configuration that says the check has been made already."""
 
 
-def start(plan: Plan, config: Mapping[str, Any]) -> None:
-    """Check the assessment, unless that was done, and write its resolved form.
+def checked_plan(config: Mapping[str, Any], first: bool) -> tuple[Plan, list[Problem] | None]:
+    """Return the plan of a Snakemake configuration, checked before anything is written.
+
+    Parameters
+    ----------
+    config
+        See `Plan.from_config`.
+    first
+        Whether this is the process that starts the jobs, and not one of a job.
+
+    Returns
+    -------
+    plan
+        The jobs.
+    problems
+        The warnings of the check; None if it was not for this process to check.
 
     Raises
     ------
     StookError
-        If the check finds an error, or the results folder cannot be written.
+        If the check finds an error: a line for each.
     """
-    if not config.get(CHECKED):
-        from stook.assessment.check import check
+    if not first or config.get(CHECKED):
+        return Plan.from_config(config), None
+    from stook.assessment.check import check
 
-        found = check(plan.assessment)
-        raise_problems(found.problems)
-        save_problems(plan.root, found.problems)
+    found = check(assessment_of(config))
+    raise_problems(found.problems)
+    return Plan.from_config(config), found.problems
+
+
+def start(plan: Plan, problems: Sequence[Problem] | None) -> None:
+    """Write the resolved assessment and, unless that was done, the warnings of its check.
+
+    Raises
+    ------
+    ResultsError
+        If the results folder cannot be written.
+    """
+    prepare_folder(plan.root)
+    if problems is not None:
+        save_problems(plan.root, problems)
     save_resolved(plan.assessment)
 
 
