@@ -169,7 +169,7 @@ def yield_on_grid(
         values[values == 0] = np.nan
         importance = None
         if isinstance(area, Raster) and unit is not None:
-            importance = np.nan_to_num(_read_hectares(area, unit, part))
+            importance = _read_density(area, unit, part)
         weighted_mean(
             values[None], part.rows.arrays, part.columns.arrays, importance,
             wanted[part.pixels], 0.0, factor, 0.0, result[:, part.pixels[0], part.pixels[1]],
@@ -275,7 +275,17 @@ def _read(raster: Raster, part: _Part) -> np.ndarray:
 
 def _read_hectares(raster: Raster, unit: AreaUnit, part: _Part) -> np.ndarray:
     values = _checked(_read(raster, part), raster.where, "an area")
+    return unit.hectares(values, _cells(raster, part))
+
+
+def _read_density(raster: Raster, unit: AreaUnit, part: _Part) -> np.ndarray:
+    """Return crop area per area of the cell: an overlap times it is the crop area in it."""
+    return np.nan_to_num(_read_hectares(raster, unit, part)) / _cells(raster, part)
+
+
+def _cells(raster: Raster, part: _Part) -> np.ndarray:
+    """Return the areas of the cells of a window, km2."""
     edges = raster.lat.edges[part.lat[0] : part.lat[-1] + 2]
     heights = cell_areas(edges, np.array([0.0, 1.0]))[:, 0]
     widths = np.diff(raster.lon.edges)[part.lon]
-    return unit.hectares(values, heights[:, None] * widths[None, :])
+    return heights[:, None] * widths[None, :]

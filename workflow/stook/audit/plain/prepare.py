@@ -136,7 +136,7 @@ def yield_of_pixel(
         weight = share
         if hectares is not None:
             area = 0.0 if math.isnan(hectares[i, j]) else hectares[i, j]
-            weight = share * area
+            weight = share * cell_km2(pixel) / cell_km2(_cell(grid, i, j)) * area
         if weight > 0 and not math.isnan(yields[i, j]) and yields[i, j] > 0:
             total += weight * yields[i, j]
             weights += weight
