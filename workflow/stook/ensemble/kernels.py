@@ -80,10 +80,12 @@ def simulation_weights(
 def percentiles(values: np.ndarray, weights: np.ndarray, shares: np.ndarray) -> np.ndarray:
     """Return weighted percentiles (kernel): (member), (member), (q) -> (q).
 
-    Member k of the members sorted by value stands at position
-    ``(C_k - w_k / 2 - w_1 / 2) / (C_n - w_n / 2 - w_1 / 2)``, C the running sum of weights w; a
-    percentile is interpolated between the two positions around it. With equal weights the position
-    is (k - 1) / (n - 1): definition 7 of Hyndman & Fan (1996), the usual one.
+    Members sorted by value are laid end to end, each as long as its share of the weight, from 0 to
+    1. Percentile p is the mean of what lies between ``(n - 1) p / n`` and ``((n - 1) p + 1) / n``,
+    where n is the effective number of members (Kish 1965), ``(sum w)**2 / sum w**2``. With equal
+    weights this is definition 7 of Hyndman & Fan (1996), the usual one; the extension to weights is
+    that of Akinshin (2023, arXiv:2304.07265). Neither the order of equal values nor members of no
+    weight matter.
 
     Parameters
     ----------
@@ -105,29 +107,29 @@ def percentiles(values: np.ndarray, weights: np.ndarray, shares: np.ndarray) -> 
         ordered = np.sort(values[kept])
         for q in range(shares.size):
             place = shares[q] * (kept.size - 1)
-            low = int(place)
-            high = min(low + 1, kept.size - 1)
-            result[q] = ordered[low] + (place - low) * (ordered[high] - ordered[low])
+            below = int(place)
+            above = min(below + 1, kept.size - 1)
+            step = ordered[above] - ordered[below]
+            result[q] = ordered[below] + (place - below) * step
         return result
     order = kept[np.argsort(values[kept], kind="mergesort")]
-    positions = np.empty(order.size)
-    running = 0.0
-    for k in range(order.size):
-        weight = weights[order[k]]
-        positions[k] = running + weight / 2
-        running += weight
-    first, last = positions[0], positions[-1]
-    k = 0
+    total, squares = 0.0, 0.0
+    for member in order:
+        total += weights[member]
+        squares += weights[member] * weights[member]
+    effective = total * total / squares
     for q in range(shares.size):
-        place = first + shares[q] * (last - first)
-        while k < order.size - 2 and positions[k + 1] < place:
-            k += 1
-        if order.size == 1:
-            result[q] = values[order[0]]
-            continue
-        part = (place - positions[k]) / (positions[k + 1] - positions[k])
-        low_value, high_value = values[order[k]], values[order[k + 1]]
-        result[q] = low_value + part * (high_value - low_value)
+        low = (effective - 1.0) * shares[q] / effective
+        high = low + 1.0 / effective
+        start, value, length = 0.0, 0.0, 0.0
+        for member in order:
+            end = start + weights[member] / total
+            part = min(end, high) - max(start, low)
+            if part > 0.0:
+                value += part * values[member]
+                length += part
+            start = end
+        result[q] = value / length
     return result
 
 

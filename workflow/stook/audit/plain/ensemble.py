@@ -105,17 +105,19 @@ def summary(members: Sequence[Member], weights: Mapping[str, float] | None = Non
 
 
 def _percentile(pairs: Sequence[tuple[float, float]], share: float) -> float:
-    """Interpolate between the middles of the weights laid end to end, from first to last."""
-    middles, run = [], 0.0
-    for _, weight in pairs:
-        middles.append(run + weight / 2)
-        run += weight
-    wanted = middles[0] + share * (middles[-1] - middles[0])
-    for k in range(len(pairs) - 1):
-        if middles[k] <= wanted <= middles[k + 1]:
-            part = (wanted - middles[k]) / (middles[k + 1] - middles[k])
-            return pairs[k][0] + part * (pairs[k + 1][0] - pairs[k][0])
-    return pairs[0][0] if wanted <= middles[0] else pairs[-1][0]
+    """Average what lies in a window of one effective member over the members laid end to end.
+
+    `pairs` are values and weights, sorted by value, the weights summing to 1.
+    """
+    effective = 1 / sum(weight**2 for _, weight in pairs)
+    low = share * (1 - 1 / effective)
+    high = low + 1 / effective
+    found = 0.0
+    for k, (value, weight) in enumerate(pairs):
+        start = sum(before for _, before in pairs[:k])
+        inside = max(0.0, min(high, start + weight) - max(low, start))
+        found += value * inside / (high - low)
+    return found
 
 
 def _model_mean(members: Sequence[Member], model: str) -> float:
@@ -128,7 +130,7 @@ def _model_mean(members: Sequence[Member], model: str) -> float:
 
 
 def _sign(value: float) -> int:
-    return (value > 0) - (value < 0)
+    return int(value > 0) - int(value < 0)
 
 
 def word(share: float) -> str:
