@@ -72,7 +72,7 @@ def compare_folders(
     if as_text:
         show(comparison, out)
     else:
-        out.print(as_json(comparison), markup=False)
+        out.print(as_json(comparison), markup=False, highlight=False, soft_wrap=True)
     return 0 if comparison.identical else DIFFERENT
 
 
