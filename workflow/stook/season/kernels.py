@@ -29,7 +29,7 @@ def season_sums(
         low, high = _span(first[year], end[year], series.shape[0])
         for day in range(low, high):
             for pixel in range(pixels):
-                inside = first[year, pixel] <= day and day < end[year, pixel]
+                inside = (first[year, pixel] <= day) & (day < end[year, pixel])
                 sums[year, pixel] += series[day, pixel] if inside else 0.0
     _blank(sums, first, end, series.shape[0])
     return sums
@@ -48,23 +48,26 @@ def season_degree_days(
     years, pixels = first.shape
     sums, parts = np.zeros((years, pixels)), np.zeros(years * pixels)
     excess, half = np.empty(BUFFER + pixels), np.empty(BUFFER + pixels)
-    season = np.empty(BUFFER + pixels, np.int64)
+    season, found = np.empty(BUFFER + pixels, np.int64), np.empty(pixels, np.int64)
+    crosses = np.zeros(pixels, np.int64)
     count = 0
     for year in range(years):
         start, stop = _span(first[year], end[year], low.shape[0])
         for day in range(start, stop):
-            crossing = _add_whole_days(
-                low[day], high[day], first[year], end[year], day, threshold, sums[year]
+            _add_whole_days(
+                low[day], high[day], first[year], end[year], day, threshold, sums[year], crosses
             )
-            if crossing == 0:
-                continue
+            several = 0
             for pixel in range(pixels):
-                cold, warm = np.float64(low[day, pixel]), np.float64(high[day, pixel])
-                excess[count] = 0.5 * (cold + warm) - threshold
-                half[count] = 0.5 * (warm - cold)
-                season[count] = year * pixels + pixel
-                inside = (first[year, pixel] <= day) & (day < end[year, pixel])
-                count += inside & (cold < threshold) & (warm > threshold)
+                found[several] = pixel
+                several += crosses[pixel]
+            for i in range(several):
+                cold = np.float64(low[day, found[i]])
+                warm = np.float64(high[day, found[i]])
+                excess[count + i] = 0.5 * (cold + warm) - threshold
+                half[count + i] = 0.5 * (warm - cold)
+                season[count + i] = year * pixels + found[i]
+            count += several
             if count > BUFFER:
                 _add_parts(excess[:count], half, season, parts)
                 count = 0
@@ -83,24 +86,23 @@ def _add_whole_days(
     day: int,
     threshold: float,
     sums: np.ndarray,
-) -> int:  # pragma: no cover - compiled
-    """Add the degree days of the pixels that lie above the threshold all day; count the crossing.
+    crosses: np.ndarray,
+) -> None:  # pragma: no cover - compiled
+    """Add the degree days of pixels that lie above the threshold all day; mark those that cross it.
 
     A missing value makes the sum missing.
     """
-    crossing = 0
     for pixel in range(sums.size):
         cold, warm = np.float64(low[pixel]), np.float64(high[pixel])
         inside = (first[pixel] <= day) & (day < end[pixel])
-        crosses = (cold < threshold) & (warm > threshold)
-        crossing += inside & crosses
-        excess = 0.5 * (cold + warm) - threshold
-        nothing = (warm <= threshold) & (cold == cold) | crosses
-        sums[pixel] += excess if inside & ~nothing else 0.0
-    return crossing
+        crossing = (cold < threshold) & (warm > threshold)
+        crosses[pixel] = 1 if inside & crossing else 0
+        below = (cold <= threshold) & (warm <= threshold)
+        excess = 0.0 if below | crossing else 0.5 * (cold + warm) - threshold
+        sums[pixel] += excess if inside else 0.0
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, error_model="numpy")
 def _add_parts(
     excess: np.ndarray, half: np.ndarray, season: np.ndarray, parts: np.ndarray
 ) -> None:  # pragma: no cover - compiled
@@ -161,7 +163,7 @@ def season_dry_spells(
     return longest
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, error_model="numpy")
 def season_vapour_pressure_deficits(
     low: np.ndarray, high: np.ndarray, humidity: np.ndarray, first: np.ndarray, end: np.ndarray
 ) -> np.ndarray:  # pragma: no cover - compiled
@@ -184,7 +186,7 @@ def season_vapour_pressure_deficits(
     return sums
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, error_model="numpy")
 def step_deficits(
     low: np.ndarray, high: np.ndarray, humidity: np.ndarray
 ) -> np.ndarray:  # pragma: no cover - compiled
