@@ -100,10 +100,17 @@ def true_yields(source: Source) -> Yields:
         By layer, shape (year, lat, lon); missing where a season began before the first year.
     """
     daily = source.daily(slice(0, len(source.axis.day)))
-    world, shape = source.domain, (-1, source.domain.rows, source.domain.columns)
-    return {
-        layer.name: _yields(world, layer, source.axis, daily).reshape(shape) for layer in LAYERS
-    }
+    return {layer.name: layer_yields(source, layer, daily) for layer in LAYERS}
+
+
+def layer_yields(
+    source: Source, layer: CropLayer, daily: dict[str, np.ndarray] | None = None
+) -> np.ndarray:
+    """Return the true yield factor of one layer, shape (year, lat, lon); see `true_yields`."""
+    if daily is None:
+        daily = source.daily(slice(0, len(source.axis.day)))
+    shape = (-1, source.domain.rows, source.domain.columns)
+    return _yields(source.domain, layer, source.axis, daily).reshape(shape)
 
 
 def regional_changes(world: Domain, later: Yields, base: Yields) -> pd.DataFrame:

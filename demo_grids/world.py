@@ -11,6 +11,7 @@ from demo_grids.climate_files import RECORD, scenarios, write_record, write_simu
 from demo_grids.crop_files import write_crops, write_districts
 from demo_grids.domain import domain
 from demo_grids.models import MODELS
+from demo_grids.panel import write_panel
 from demo_grids.responses import write_responses
 
 SEED = 20260101
@@ -62,6 +63,7 @@ def generate(
         ("districts", partial(write_districts, folder / "districts.gpkg", world)),
         ("responses", partial(write_responses, folder / "responses", seed)),
         ("HOLLIN-OBS", partial(write_record, folder / "reference", world, seed)),
+        ("yield panel", partial(write_panel, folder / "fit", world, seed)),
     ]
     for model, scenario, historical in scenarios(world):
         target = folder / "climate" / model.name
@@ -80,7 +82,8 @@ def generate(
 
 def _remove_earlier(folder: Path) -> None:
     """Remove the files of an earlier world that a world of another size would not replace."""
-    (folder / "assessment.yaml").unlink(missing_ok=True)
+    for name in ("assessment.yaml", "fit/yields.csv", "fit/maize_rainfed.yaml"):
+        (folder / name).unlink(missing_ok=True)
     for model in MODELS:
         for path in (folder / "climate" / model).glob(f"*_day_{model}_*.nc"):
             path.unlink()
