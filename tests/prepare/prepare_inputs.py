@@ -16,6 +16,7 @@ from stook.assessment.schema import Assessment
 from stook.audit.ledger import Job
 from stook.grids.analysis import AnalysisGrid
 
+LAT, LON = np.arange(9.5, 14), np.arange(19.5, 25)
 UNITS = {
     "tas": "K",
     "tasmin": "K",

@@ -141,7 +141,7 @@ def test_yield_is_weighted_by_the_crop_area_of_its_own_grid() -> None:
     edges = np.array([10.0, 10.5]), np.array([20.0, 20.25, 20.5])
     yields = raster_of(np.array([[2.0, 4.0]]), *edges, "t ha-1")
     area = raster_of(np.array([[10.0, 30.0]]), *edges, "ha")
-    assert yield_on_grid(yields, grid, area, 64)[0, 0] == 3.5
+    assert yield_on_grid(yields, grid, area, 64)[0, 0] == pytest.approx(3.5, rel=1e-14)
     assert yield_on_grid(yields, grid, Number("key", 5.0, "ha"), 64)[0, 0] == 3.0
     uneven = edges[0], np.array([20.0, 20.25, 21.0])  # a third of the 30 ha lies in the pixel
     yields_, area_ = (
