@@ -176,7 +176,7 @@ def _in_degrees(shapes: gpd.GeoSeries) -> list[shapely.Geometry | None]:
     """Return shapes in longitude and latitude; edges of projected ones are cut short before."""
     if shapes.crs.is_projected:
         metres = shapes.crs.axis_info[0].unit_conversion_factor
-        present = shapes.notna() & ~shapes.is_empty
+        present = [shape is not None and not shape.is_empty for shape in shapes]
         shapes = shapes.copy()
         shapes[present] = shapes[present].segmentize(EDGE_METRES / metres)
     return list(shapes.to_crs(EPSG))
