@@ -102,9 +102,12 @@ def _arrays(
     position = np.zeros(years[-1] + 1, dtype=np.int64)
     position[years] = np.arange(years.size)
     year = position[place]
-    draws = int(columns["draw"].max()) + 1
-    production = np.full((draws, len(names), years.size), np.nan)
-    production[columns["draw"], region, year] = columns["production_t"]
+    shape = (int(columns["draw"].max()) + 1, len(names), years.size)
+    if _in_order(shape, columns["draw"], region, year):
+        production = columns["production_t"].reshape(shape)
+    else:
+        production = np.full(shape, np.nan)
+        production[columns["draw"], region, year] = columns["production_t"]
     central = columns["draw"] == CENTRAL_DRAW
     extrapolated = np.full((len(names), years.size), np.nan)
     extrapolated[region[central], year[central]] = columns["extrapolated_share"][central]
@@ -120,6 +123,14 @@ def _arrays(
         areas["missing_area_ha"],
         extrapolated,
     )
+
+
+def _in_order(shape: tuple[int, int, int], *places: np.ndarray) -> bool:
+    """Tell whether rows lie as an array of a shape does, without copying them about."""
+    if places[0].size != np.prod(shape):
+        return False
+    axes = np.ogrid[tuple(slice(size) for size in shape)]
+    return all((p.reshape(shape) == axis).all() for p, axis in zip(places, axes, strict=True))
 
 
 @dataclass(frozen=True)
