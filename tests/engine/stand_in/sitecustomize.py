@@ -19,6 +19,10 @@ import time
 from pathlib import Path
 from types import ModuleType
 
+RISK = (
+    *("partition", "emergence", "classes", "robustness", "levels", "windows"),
+    *("shortfall", "joint", "losses", "supply"),
+)
 STAGES = ("prepare", "correct", "season", "yields", "regions", "ensemble", "trend", "report")
 
 
@@ -43,6 +47,11 @@ def outputs(layout, rule, given):
         "yields_grid": lambda: [layout.yields(sim, crop, system)],
         "ensemble_changes": lambda: [layout.changes, layout.members, layout.yearly],
         "ensemble_pixels": lambda: [layout.ensemble_pixels(crop, system, scenario)],
+        "ensemble_risk": lambda: [layout.ensemble_table(name) for name in RISK],
+        "ensemble_robustness": lambda: [
+            layout.robustness_pixels(crop, system, scenario),
+            layout.area_losses(crop, system, scenario),
+        ],
         "trend_pixels": lambda: [
             layout.trend_pixels(sim, crop, system),
             layout.trend_distribution(sim, crop, system),

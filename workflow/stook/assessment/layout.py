@@ -120,6 +120,18 @@ class Layout:
         """Maps of yield change, spread and agreement."""
         return self.root / "ensemble" / "pixels" / f"{crop}_{system}_{scenario}.nc"
 
+    def ensemble_table(self, name: str) -> Path:
+        """A table of risk: see `stook.ensemble.risk.TABLES`, and windows."""
+        return self.root / "ensemble" / f"{name}.parquet"
+
+    def robustness_pixels(self, crop: str, system: str, scenario: str) -> Path:
+        """Maps of the robustness of the change."""
+        return self.root / "ensemble" / "robustness" / f"{crop}_{system}_{scenario}.nc"
+
+    def area_losses(self, crop: str, system: str, scenario: str) -> Path:
+        """Share of harvested area that loses more than a limit."""
+        return self.root / "ensemble" / "losses" / f"{crop}_{system}_{scenario}.parquet"
+
     # trend
     def trend_pixels(self, simulation: str, crop: str, system: str) -> Path:
         """Maps of slopes, p-values and false discovery rate."""
@@ -136,6 +148,14 @@ class Layout:
     def trend_regions(self, simulation: str) -> Path:
         """Slopes and p-values of regional yields."""
         return self.root / "trend" / simulation / "regions.parquet"
+
+    def impact(self, crop: str) -> Path:
+        """Observed impact by region: yields under observed against detrended weather."""
+        return self.root / "trend" / OBSERVED / f"{crop}_impact.parquet"
+
+    def impact_map(self, crop: str, system: str) -> Path:
+        """Maps of the observed impact."""
+        return self.root / "trend" / OBSERVED / f"{crop}_{system}_impact.nc"
 
     # report
     @property

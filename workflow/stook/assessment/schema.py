@@ -6,6 +6,7 @@ The reference of every key, with defaults, is docs/assessment-file.md.
 from __future__ import annotations
 
 import re
+from itertools import pairwise
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -247,11 +248,70 @@ class Regions(Section):
     only: list[str] | None = Field(None, description="keep these regions of the file only")
 
 
+class WarmingLevels(Section):
+    """Global warming levels as horizons, each simulation with its own 20-year window."""
+
+    file: Path = Field(
+        description="CSV with the global mean temperature of every simulation: "
+        "model, scenario, realisation, year, tas"
+    )
+    levels: list[Annotated[float, Field(gt=0, le=10)]] = Field(
+        default_factory=lambda: [1.5, 2.0, 3.0, 4.0],
+        min_length=1,
+        description="K above the mean of 1850-1900",
+    )
+
+
 class Ensemble(Section):
     """The ensemble stage."""
 
     draws: int = Field(200, ge=0, le=10000, description="draws of the response coefficients")
     weights: dict[Name, float] | None = Field(None, description="model weights; default: equal")
+    warming_levels: WarmingLevels | None = Field(
+        None, description="horizons by global warming level, besides those of periods"
+    )
+    classes: list[float] = Field(
+        default_factory=lambda: [-25.0, -10.0, -5.0, 0.0, 5.0, 10.0, 25.0],
+        min_length=1,
+        description="bounds of the classes of yield change, %, ascending",
+    )
+    class_years: int = Field(
+        20, ge=10, le=50, description="years of the successive periods of the class bars"
+    )
+    partition_years: int = Field(
+        10,
+        ge=1,
+        le=30,
+        description="years of the running mean whose variance counts as internal variability",
+    )
+    shortfall: float = Field(
+        25.0, gt=0, lt=100, description="a year this far below the expected path fails, %"
+    )
+
+    @model_validator(mode="after")
+    def _ascending(self) -> Ensemble:
+        if any(b <= a for a, b in pairwise(self.classes)):
+            raise ValueError("classes must ascend")
+        return self
+
+
+class EnergyContent(Section):
+    """Energy of a crop as it is weighed in its yield."""
+
+    kcal: float = Field(gt=0, lt=1000, description="kcal per 100 g")
+    basis: str = Field(min_length=1, description="product and source, such as: rice, milled; ...")
+
+
+class Supply(Section):
+    """From production to people supplied."""
+
+    energy: dict[Name, EnergyContent] = Field(
+        default_factory=dict, description="by crop; default: FAO 2001 for crops of known name"
+    )
+    kcal_per_day: float = Field(2000.0, gt=0, description="kcal a person needs a day")
+    population: Path | None = Field(
+        None, description="CSV with the people of each region: region, population"
+    )
 
 
 class Trend(Section):
@@ -292,6 +352,7 @@ class Assessment(Section):
     crops: dict[Name, Crop] = Field(min_length=1)
     regions: Regions
     ensemble: Ensemble = Ensemble()
+    supply: Supply = Supply()
     trend: Trend = Trend()
     store: Store = Store()
     subset: list[str] = Field(
@@ -308,6 +369,8 @@ class Assessment(Section):
             raise ValueError(
                 "reference is required, unless correct.all.method is none for every variable"
             )
+        if unknown := sorted(set(self.supply.energy) - set(self.crops)):
+            raise ValueError(f"supply.energy: {', '.join(unknown)} is no crop of the assessment")
         if self.reference is None and not (self.simulations.pattern or self.simulations.runs):
             raise ValueError("give simulations, a reference, or both")
         return self

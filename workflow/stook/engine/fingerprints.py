@@ -65,6 +65,11 @@ def _grid(job: Job) -> Any:
     return job.assessment.grid.model_dump(mode="json", exclude={"tiles"})
 
 
+def _levels(job: Job) -> Any:
+    spec = job.assessment.ensemble.warming_levels
+    return _plain(spec) if spec else None
+
+
 SECTIONS: dict[str, Callable[[Job], Any]] = {
     "assessment": lambda job: assessment_digest(job.assessment),
     "baseline": lambda job: job.assessment.periods.baseline,
@@ -73,6 +78,8 @@ SECTIONS: dict[str, Callable[[Job], Any]] = {
     "correction": _correction,
     "draws": lambda job: job.assessment.ensemble.draws,
     "ensemble": lambda job: job.assessment.ensemble.model_dump(mode="json", exclude={"draws"}),
+    "levels": _levels,
+    "supply": lambda job: _plain(job.assessment.supply),
     "grid": _grid,
     "horizons": lambda job: job.assessment.periods.horizons,
     "indices": _indices,
@@ -85,6 +92,7 @@ SECTIONS: dict[str, Callable[[Job], Any]] = {
     "tiles": lambda job: job.assessment.grid.tiles,
     "trend": lambda job: _plain(job.assessment.trend),
     "variables": lambda job: job.variables,
+    "weights": lambda job: job.assessment.ensemble.weights,
 }
 """The parts of an assessment a job may depend on, by the name shown when one has changed."""
 
@@ -98,10 +106,14 @@ RULES: dict[str, tuple[str, ...]] = {
     "yields_coefficients": ("draws", "seed"),
     "yields_grid": ("baseline",),
     "regions_totals": ("baseline",),
-    "ensemble_changes": ("baseline", "horizons", "ensemble"),
-    "ensemble_pixels": ("baseline", "horizons", "ensemble"),
+    "ensemble_changes": ("baseline", "horizons", "weights"),
+    "ensemble_pixels": ("baseline", "horizons", "weights"),
+    "ensemble_risk": ("baseline", "horizons", "ensemble", "supply"),
+    "ensemble_robustness": ("baseline", "horizons", "weights", "levels"),
     "trend_pixels": ("trend", "seed"),
     "trend_regions": ("trend", "seed", "baseline"),
+    "trend_impact": ("trend", "seed", "baseline"),
+    "trend_impact_map": ("trend", "seed", "baseline"),
     "report_page": ("assessment",),
 }
 """The sections each rule depends on. What arrives through an input file is not repeated here."""

@@ -178,6 +178,25 @@ class Plan:
         names = [one] if one else list(self.simulations)
         return [RELATIVE.totals(name, crop) for name in names for crop in self.assessment.crops]
 
+    def global_means(self, wildcards: Wildcards) -> list[str]:
+        """Return the table of global mean temperatures, if warming levels are wanted."""
+        spec = self.assessment.ensemble.warming_levels
+        return [self.inside(self.assessment.path(spec.file))] if spec else []
+
+    def population(self, wildcards: Wildcards) -> list[str]:
+        """Return the table of the people of each region, if one is given."""
+        path = self.assessment.supply.population
+        return [self.inside(self.assessment.path(path))] if path else []
+
+    def observed_grids(self, wildcards: Wildcards) -> list[Path]:
+        """Return season tiles, yields and draws of `observed`, of one or all systems of a crop."""
+        crop = wildcards.get("crop")
+        found: list[Path] = []
+        for system in self._systems(wildcards):
+            found += [RELATIVE.season(OBSERVED, crop, system, tile) for tile in self.tiles]
+            found += [RELATIVE.yields(OBSERVED, crop, system), RELATIVE.coefficients(crop, system)]
+        return found
+
     def before_report(self, wildcards: Wildcards) -> list[Path]:
         """Return every result the report may draw on."""
         return self.targets(STAGES[-2])
@@ -235,19 +254,23 @@ class Plan:
 
     def _ensemble_targets(self) -> list[Path]:
         tables = [RELATIVE.changes, RELATIVE.members, RELATIVE.yearly]
-        if not self.assessment.periods.horizons:
-            return tables
-        return tables + [
-            RELATIVE.ensemble_pixels(*pair, scenario)
-            for pair in self.assessment.systems
-            for scenario in self.scenarios
-        ]
+        tables.append(RELATIVE.ensemble_table("partition"))
+        groups = [(*pair, name) for pair in self.assessment.systems for name in self.scenarios]
+        calendar = bool(self.assessment.periods.horizons)
+        if calendar:
+            tables += [RELATIVE.ensemble_pixels(*group) for group in groups]
+        if calendar or self.assessment.ensemble.warming_levels:
+            tables += [RELATIVE.robustness_pixels(*group) for group in groups]
+        return tables
 
     def _trend_targets(self) -> list[Path]:
         found = [RELATIVE.trend_regions(simulation) for simulation in self.simulations]
         for simulation in self.simulations:
             for pair in self.assessment.systems:
                 found.append(RELATIVE.trend_pixels(simulation, *pair))
+        if OBSERVED in self.simulations:
+            found += [RELATIVE.impact(crop) for crop in self.assessment.crops]
+            found += [RELATIVE.impact_map(*pair) for pair in self.assessment.systems]
         return found
 
     def _report_targets(self) -> list[Path]:

@@ -17,7 +17,11 @@ BLOCKS = {
     "yields_grid": 8,
     "regions_totals": 8,
     "ensemble_pixels": 8,
+    "ensemble_risk": 24,
+    "ensemble_robustness": 8,
     "trend_pixels": 10,
+    "trend_impact": 10,
+    "trend_impact_map": 10,
 }
 """Blocks of `store.block_mb` a job of a rule holds per thread at its peak."""
 

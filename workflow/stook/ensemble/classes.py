@@ -70,7 +70,7 @@ def class_table(
     parts = []
     for number, (start, stop) in enumerate(steps):
         values = np.stack([run.steps[:, number] for run in runs], axis=1)  # region, run, draw
-        weights = period_weights(runs, np.isfinite(values[..., 0]), models)
+        weights = period_weights(np.isfinite(values[..., 0]), models)
         for region, name in first.grown():
             change = members_of(values[region])
             if not np.isfinite(change).any():

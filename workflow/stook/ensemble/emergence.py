@@ -17,8 +17,7 @@ from numba import njit
 
 from stook.ensemble.kernels import percentiles
 from stook.ensemble.series import Models
-from stook.ensemble.shortfall import stacked_rows
-from stook.ensemble.summary import RunSummary, period_weights
+from stook.ensemble.summary import RunSummary, period_weights, stacked_rows
 
 RATIOS = (1.0, 2.0)
 """Signal to noise."""
@@ -92,7 +91,7 @@ def emergence_table(runs: Sequence[RunSummary], models: Models, after: int) -> p
     """
     first = runs[0]
     noise = np.stack([run.deviation for run in runs], axis=1)
-    weights = period_weights(runs, np.isfinite(noise), models)
+    weights = period_weights(np.isfinite(noise), models)
     last = max(int(run.years[-1]) for run in runs)
     rows: list[dict[str, object]] = []
     for ratio in RATIOS:

@@ -87,7 +87,9 @@ def read_global_means(path: Path) -> pd.DataFrame:
     except (OSError, ValueError) as error:
         raise InputError(f"{path}: cannot be read as CSV ({error})") from None
     if lost := [name for name in _COLUMNS if name not in frame]:
-        raise InputError(f"{path}: lacks the columns {', '.join(lost)}; needs {', '.join(_COLUMNS)}")
+        raise InputError(
+            f"{path}: lacks the columns {', '.join(lost)}; needs {', '.join(_COLUMNS)}"
+        )
     for name in ("year", "tas"):
         numbers = pd.to_numeric(frame[name], errors="coerce")
         if numbers.isna().any():
@@ -162,7 +164,7 @@ def _series(
 def horizons_of(
     assessment: Assessment, windows: pd.DataFrame, simulation: str
 ) -> Mapping[str, Years]:
-    """Return first and last year of every horizon a simulation has: calendar windows, then levels."""
+    """Return first and last year of a simulation's horizons: calendar windows, then levels."""
     own = windows[(windows["simulation"] == simulation) & windows["first"].notna()]
     levels = {
         str(name): (int(first), int(last))

@@ -17,8 +17,7 @@ from numba import njit
 
 from stook.constants import CENTRAL_DRAW
 from stook.ensemble.series import Models
-from stook.ensemble.shortfall import stacked_rows
-from stook.ensemble.summary import RunSummary, period_weights
+from stook.ensemble.summary import RunSummary, period_weights, stacked_rows
 
 EXCEEDING = 0.66
 """Share of models whose change must exceed the threshold."""
@@ -174,7 +173,7 @@ def robustness_table(
             threshold[:, number] = variability_threshold(run.baseline_deviation, *years)
         signal, shares, counts = classify(change, threshold, models.number, models.weight.size)
         there = np.isfinite(change) & np.isfinite(threshold)
-        weights = period_weights(runs, there, models)
+        weights = period_weights(there, models)
         for region, name in first.grown():
             known = weights[region] > 0
             mean = float((weights[region, known] * threshold[region, known]).sum())

@@ -1,9 +1,7 @@
-"""Years of shortfall: how often production falls far below what was expected.
+"""How often production falls far below what was expected, and how bad the worst year is.
 
-A shortfall is a year with production at least a given share (25 %, common practice, no source)
-below the expected path. Two paths: the baseline mean of the same member, which counts the change
-of the mean as well, and the smooth path of the member itself, which counts the bad years around
-it only.
+A shortfall is a year at least 25 % (an option; common practice, no source) below the expected
+path; see `stook.ensemble.short_years` for the two paths.
 """
 
 from __future__ import annotations
@@ -12,14 +10,18 @@ from collections.abc import Sequence
 
 import numpy as np
 import pandas as pd
-from numba import njit
 from scipy import stats
 
-REFERENCES = ("baseline mean", "smooth path")
-"""The two expected paths."""
+from stook.ensemble.changes import members_of
+from stook.ensemble.kernels import percentiles
+from stook.ensemble.series import Models
+from stook.ensemble.short_years import REFERENCES
+from stook.ensemble.summary import RunSummary, period_weights, stacked_rows
 
 LEVEL = 0.90
 """Coverage of the intervals."""
+
+_ENDS = np.array([0.05, 0.95])
 
 SHORTFALL = {
     **dict.fromkeys(("crop", "system", "region", "scenario", "period", "reference"), "str"),
@@ -30,83 +32,6 @@ SHORTFALL = {
     **dict.fromkeys(("worst_t", "worst_mean_t", "worst_percent"), "float64"),
 }
 """Columns of the shortfall table; see docs/risk.md."""
-
-
-@njit(cache=True, nogil=True)
-def short_counts(
-    values: np.ndarray,
-    paths: np.ndarray,
-    base: np.ndarray,
-    periods: np.ndarray,
-    lengths: np.ndarray,
-    share: float,
-) -> tuple[np.ndarray, np.ndarray]:
-    """Count years and shortfalls by period (kernel).
-
-    (series, year) x 2, (series), (period, year), (period) -> (series, period), (series, period, 2)
-
-    Parameters
-    ----------
-    values, paths
-        Production and its smooth path, t; NaN is missing.
-    base
-        Baseline mean, t, above 0 or NaN.
-    periods
-        bool, years of each period.
-    lengths
-        Years of each period, whether the series has them or not.
-    share
-        Shortfall as a share of the expected production.
-
-    Returns
-    -------
-    counted
-        Years with a value.
-    short
-        Years with a shortfall against the baseline mean and the smooth path; NaN where the
-        expectation is missing or fewer than two thirds of the years have a value.
-    """
-    counted = np.zeros((values.shape[0], periods.shape[0]))
-    short = np.full((values.shape[0], periods.shape[0], 2), np.nan)
-    for series in range(values.shape[0]):
-        for period in range(periods.shape[0]):
-            years, low, below = 0, 0, 0
-            for year in range(values.shape[1]):
-                value = values[series, year]
-                if periods[period, year] and not np.isnan(value):
-                    years += 1
-                    low += value <= (1.0 - share) * base[series]
-                    below += value <= (1.0 - share) * paths[series, year]
-            counted[series, period] = years
-            if years == 0 or 3 * years < 2 * lengths[period] or np.isnan(base[series]):
-                continue
-            short[series, period, 0] = low
-            known = False
-            for year in range(values.shape[1]):
-                known = known or (periods[period, year] and not np.isnan(paths[series, year]))
-            if known:
-                short[series, period, 1] = below
-    return counted, short
-
-
-@njit(cache=True, nogil=True)
-def short_years(
-    values: np.ndarray, paths: np.ndarray, base: np.ndarray, share: float
-) -> np.ndarray:
-    """Mark the years of shortfall (kernel): (series, year) x 2, (series) -> (series, 2, year).
-
-    1 a shortfall, 0 none, -1 unknown; arguments as of `short_counts`.
-    """
-    result = np.full((values.shape[0], 2, values.shape[1]), -1, np.int8)
-    for series in range(values.shape[0]):
-        for year in range(values.shape[1]):
-            value = values[series, year]
-            if np.isnan(value) or np.isnan(base[series]):
-                continue
-            result[series, 0, year] = value <= (1.0 - share) * base[series]
-            if not np.isnan(paths[series, year]):
-                result[series, 1, year] = value <= (1.0 - share) * paths[series, year]
-    return result
 
 
 def exact_interval(share: float, years: float, level: float = LEVEL) -> tuple[float, float]:
@@ -153,36 +78,63 @@ def pooled(shares: np.ndarray, years: np.ndarray, weights: np.ndarray) -> tuple[
     return min(float(share), 1.0), float(1.0 / inverse)
 
 
-def shortfall_row(
-    shares: np.ndarray, years: np.ndarray, weights: np.ndarray, members: Sequence[float]
-) -> dict[str, float]:
-    """Return the statement on one region, period and reference.
+def shortfall_table(runs: Sequence[RunSummary], models: Models) -> pd.DataFrame:
+    """Return the shortfalls of one scenario, crop and system, columns `SHORTFALL`."""
+    first = runs[0]
+    names = {"crop": first.crop, "system": first.system}
+    names["scenario"] = first.simulation.scenario
+    rows: list[dict[str, object]] = []
+    for period in dict.fromkeys(name for run in runs for name in run.periods):
+        have = [number for number, run in enumerate(runs) if period in run.periods]
+        chosen = [(runs[number], runs[number].periods.index(period)) for number in have]
+        own = Models(models.number[have], models.weight)
+        years = np.stack([run.counted[:, place] for run, place in chosen], axis=1)
+        short = np.stack([run.short[:, place] for run, place in chosen], axis=1)
+        base = np.stack([run.production[:, 0, 0] for run, _ in chosen], axis=1)
+        worst = np.stack([run.worst[:, place] for run, place in chosen], axis=1)
+        for number, reference in enumerate(REFERENCES):
+            found = short[:, :, number]  # region, run, draw
+            weights = period_weights(np.isfinite(found[..., 0]), own)
+            for region, name in first.grown():
+                if not weights[region].any():
+                    continue
+                place = {"region": name, "period": period, "reference": reference}
+                row = _row(found[region], years[region], weights[region])
+                low = _worst(worst[region], base[region], weights[region])
+                rows.append({**names, **place, **row, **low})
+    return stacked_rows(rows, SHORTFALL)
 
-    Parameters
-    ----------
-    shares, years, weights
-        Of each simulation, central estimate.
-    members
-        Mean, 5th and 95th percentile of the share over all members.
-    """
-    share, effective = pooled(shares, years, weights)
+
+def _row(short: np.ndarray, years: np.ndarray, weights: np.ndarray) -> dict[str, float]:
+    """Return shares and return periods of (run, draw) counts in so many years each."""
+    used = weights > 0
+    shares = short[used] / years[used, None]
+    share, effective = pooled(shares[:, 0], years[used], weights[used])
     low, high = exact_interval(share, effective)
+    members = members_of(shares)
+    own = np.repeat(weights[used, None] / members.shape[1], members.shape[1], axis=1)
+    ends = percentiles(members.ravel(), own.ravel(), _ENDS)
     return {
-        "simulations": int((weights > 0).sum()),
-        "years": int(years[weights > 0].sum()),
+        "simulations": int(used.sum()),
+        "years": int(years[used].sum()),
         "share": share,
         "low": low,
         "high": high,
         "return_years": return_period(share),
         "return_low": return_period(high),
         "return_high": return_period(low),
-        "member_mean": members[0],
-        "member_p05": members[1],
-        "member_p95": members[2],
+        "member_mean": min(float((own * members).sum()), 1.0),
+        "member_p05": ends[0],
+        "member_p95": ends[1],
     }
 
 
-def stacked_rows(rows: Sequence[dict[str, object]], columns: dict[str, str]) -> pd.DataFrame:
-    """Return rows as a table of the given columns and types."""
-    frame = pd.DataFrame(list(rows), columns=list(columns))
-    return frame.astype(columns)
+def _worst(worst: np.ndarray, base: np.ndarray, weights: np.ndarray) -> dict[str, float]:
+    """Return the worst year: of all simulations, and the mean of each one's worst."""
+    used = weights > 0
+    percent = 100.0 * worst[used] / base[used]
+    return {
+        "worst_t": float(worst[used].min()),
+        "worst_mean_t": float((weights[used] * worst[used]).sum()),
+        "worst_percent": float((weights[used] * percent).sum()),
+    }

@@ -19,7 +19,7 @@ from stook.ensemble import smooth
 from stook.ensemble.changes import Changes, changes_of
 from stook.ensemble.kernels import SHARE_OF_YEARS, period_means, simulation_weights
 from stook.ensemble.series import Models, SystemSeries
-from stook.ensemble.shortfall import REFERENCES, short_counts, short_years
+from stook.ensemble.short_years import REFERENCES, short_counts, short_years
 
 TOTAL = "all regions"
 """Name of the sum of the regions; those outside every polygon are not in it."""
@@ -322,8 +322,8 @@ def _lowest(values: np.ndarray) -> np.ndarray:
     return np.where(np.isfinite(low), low, np.nan)
 
 
-def period_weights(runs: Sequence[RunSummary], there: np.ndarray, models: Models) -> np.ndarray:
-    """Return weights of the simulations of a scenario: (region, run) -> (region, run).
+def period_weights(there: np.ndarray, models: Models) -> np.ndarray:
+    """Return the weights of simulations in each region: (region, run) -> (region, run).
 
     Parameters
     ----------
@@ -342,3 +342,9 @@ def labelled(
     """Stack tables, add columns that are the same in every row, and set order and types."""
     frame = pd.concat(list(parts), ignore_index=True).assign(**same)
     return frame[list(columns)].astype(dict(columns))
+
+
+def stacked_rows(rows: Sequence[dict[str, object]], columns: dict[str, str]) -> pd.DataFrame:
+    """Return rows as a table of the given columns and types."""
+    frame = pd.DataFrame(list(rows), columns=list(columns))
+    return frame.astype(columns)
