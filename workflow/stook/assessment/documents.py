@@ -13,7 +13,10 @@ from stook.errors import AssessmentError
 Model = TypeVar("Model", bound=BaseModel)
 
 
-class _UniqueKeyLoader(yaml.SafeLoader):
+_SafeLoader: type[yaml.SafeLoader] = getattr(yaml, "CSafeLoader", yaml.SafeLoader)
+
+
+class _UniqueKeyLoader(_SafeLoader):  # type: ignore[misc, valid-type]
     """A safe loader that refuses a key written twice in one mapping."""
 
 
