@@ -10,6 +10,7 @@ import pandas as pd
 import xarray as xr
 
 from stook.constants import CENTRAL_DRAW, OUTSIDE
+from stook.grids.files import PIXEL_CHUNK
 from stook.regions.kernels import add_areas, add_flagged
 from stook.yields.draws import DrawTotals
 from stook.yields.response import Response
@@ -175,6 +176,8 @@ def _bands(
     rows, width = season.sizes["lat"], season.sizes["lon"]
     values = (len(response.indices) + columns) * season.sizes["year"]
     lines = max(1, int(block_mb * 2**20 / (8 * values * width)))
+    if lines > PIXEL_CHUNK:
+        lines -= lines % PIXEL_CHUNK  # whole chunks of the files
     for start in range(0, rows, lines):
         yield slice(start, min(start + lines, rows))
 
