@@ -38,3 +38,46 @@ rule trend_regions:
     shell:
         'exec "$STOOK_PYTHON" -m stook.job trend regions --results . --threads {threads} '
         "simulation={wildcards.simulation:q} > {log:q} 2>&1"
+
+
+rule trend_impact:
+    input:
+        observed=PLAN.observed_grids,
+        responses=PLAN.responses,
+        layers=LAYOUT.layers,
+        overlay=LAYOUT.overlay,
+    output:
+        table=LAYOUT.impact("{crop}"),
+    log:
+        "logs/trend/impact_{crop}.log",
+    conda:
+        "environment.yaml"
+    threads: PLAN.threads(workflow.cores)
+    resources:
+        mem_mb=lambda wildcards, threads: PLAN.memory("trend_impact", threads),
+    params:
+        fingerprint=PLAN.fingerprint("trend_impact"),
+    shell:
+        'exec "$STOOK_PYTHON" -m stook.job trend impact --results . --threads {threads} '
+        "crop={wildcards.crop} > {log:q} 2>&1"
+
+
+rule trend_impact_map:
+    input:
+        observed=PLAN.observed_grids,
+        response=PLAN.response,
+        layers=LAYOUT.layers,
+    output:
+        grids=LAYOUT.impact_map("{crop}", "{system}"),
+    log:
+        "logs/trend/impact_map_{crop}_{system}.log",
+    conda:
+        "environment.yaml"
+    threads: PLAN.threads(workflow.cores)
+    resources:
+        mem_mb=lambda wildcards, threads: PLAN.memory("trend_impact_map", threads),
+    params:
+        fingerprint=PLAN.fingerprint("trend_impact_map"),
+    shell:
+        'exec "$STOOK_PYTHON" -m stook.job trend impact_map --results . --threads {threads} '
+        "crop={wildcards.crop} system={wildcards.system} > {log:q} 2>&1"

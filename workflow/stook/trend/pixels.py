@@ -243,7 +243,7 @@ class _Grids:
         )
 
 
-_TEST = {
+TEST_WORDS = {
     "ar1": "AR(1) surrogates",
     "shuffle": "shuffled years",
     "blocks": "moving blocks",
@@ -256,7 +256,7 @@ def _attributes(quantity: Quantity, options: TrendOptions) -> dict[str, dict[str
     rate = rate_for_level(options.level)
     p_values: dict[str, dict[str, object]] = {
         f"p_{test}": {
-            "long_name": f"p-value of the trend of {what} against {_TEST[test]}, two-sided",
+            "long_name": f"p-value of the trend of {what} against {TEST_WORDS[test]}, two-sided",
             "units": "1",
             "randomisations": np.int32(options.count),
         }
@@ -273,7 +273,7 @@ def _attributes(quantity: Quantity, options: TrendOptions) -> dict[str, dict[str
         },
         "significant": {
             "long_name": f"trend of {what} is significant among the pixels of its region, "
-            f"{_TEST[options.method]}, false discovery rate {rate:g}",
+            f"{TEST_WORDS[options.method]}, false discovery rate {rate:g}",
             "flag_values": np.array([UNKNOWN, 0, 1], dtype=np.int8),
             "flag_meanings": "unknown not_significant significant",
             "false_discovery_rate": rate,

@@ -118,7 +118,7 @@ def series_trends(
     if with_random:
         shape = (options.count + 1, series)
         random = RandomTrends(np.full(shape, np.nan), np.zeros(shape, dtype=bool))
-    blocks = list(_blocks(values, years, options))
+    blocks = list(same_years(values, years, options))
     tasks = [
         dask.delayed(_block_trends)(values[np.ix_(rows, columns)], drawn, options, with_random)
         for rows, columns, drawn in blocks
@@ -154,7 +154,7 @@ def draw(years: np.ndarray, options: TrendOptions) -> Randomisations | None:
     return randomisations(options.seed, tuple(years.tolist()), options.count)
 
 
-def _blocks(
+def same_years(
     values: np.ndarray, years: np.ndarray, options: TrendOptions
 ) -> Iterator[tuple[np.ndarray, np.ndarray, Randomisations]]:
     """Yield blocks of series with the same years: row mask, columns, randomisations."""
