@@ -25,6 +25,7 @@ from stook.correct.setup import (
     PAIR,
     Part,
     Setup,
+    Tables,
     quantities_of,
 )
 from stook.correct.windows import YEAR_DAYS, Series
@@ -33,6 +34,9 @@ from stook.randomness import stream_key
 
 PROBABILITIES = np.round(np.linspace(0.0, 1.0, 21), 2)
 """Probabilities of the quantiles in the transfer file."""
+
+MONTH_DAYS = (31, 28, 31, 30, 31, 30, 31, 31, 30, 31, 30, 31)
+"""Days of the months of a year of 365 days."""
 
 SHOWN_EVERY = 6
 """Every how many windows the transfer file has one (30 days by default)."""
@@ -141,8 +145,12 @@ def correct_group(
             mapped[name] = series
             found.reason[np.isnan(series).all(axis=1)] = int(Reason.MISSING_INPUT)
             continue
-        mapped[name], reason, capped, kept = _map(
-            o[name].take(part.o, axis=1), f[name].take(part.h, axis=1), series, part, name, keep
+        mapped[name], reason, capped, kept = map_series(
+            o[name].take(part.o, axis=1),
+            f[name].take(part.h, axis=1),
+            series,
+            part.mappings[name],
+            keep,
         )
         np.maximum(found.reason, reason, out=found.reason)
         if part.mappings[name].quantity.ratio:
@@ -153,10 +161,26 @@ def correct_group(
     return found
 
 
-def _map(
-    o: np.ndarray, h: np.ndarray, f: np.ndarray, part: Part, name: str, keep: bool
+def map_series(
+    o: np.ndarray, h: np.ndarray, f: np.ndarray, tables: Tables, keep: bool = False
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    tables = part.mappings[name]
+    """Map the series of one quantity.
+
+    Parameters
+    ----------
+    o, h, f
+        Reference and model in the calibration period, model to correct: contiguous, all float32
+        or all float64, shape (pixel, time).
+    tables
+        From `setup.tables_of` for these time axes.
+    keep
+        Whether to keep calibration quantiles.
+
+    Returns
+    -------
+    out, reason, capped, kept
+        As in `kernels_pixels.correct_pixels`.
+    """
     longest = max(o.shape[1], h.shape[1], f.shape[1])
     plans = (tables.o_plan, tables.h_plan, tables.f_plan)
     scratch = make_scratch(longest, *plans, tables.rule, f.dtype)
@@ -206,7 +230,7 @@ def _upper_bounds(name: str, series: Series, lat: np.ndarray) -> tuple[np.ndarra
     daily = clear_sky(lat, days)
     if series.step == "annual":
         return daily.mean(axis=1, keepdims=True), np.zeros(len(series), np.int64)
-    month = ((days - 0.5) / YEAR_DAYS * 12).astype(np.int64)
+    month = np.repeat(np.arange(12), MONTH_DAYS)
     monthly = np.stack([daily[:, month == number].mean(axis=1) for number in range(12)], axis=1)
     return monthly, series.month - 1
 

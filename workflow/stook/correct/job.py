@@ -17,6 +17,7 @@ from stook.assessment.simulations import simulations
 from stook.audit.ledger import Job
 from stook.constants import OBSERVED
 from stook.correct.grids import correct_grids
+from stook.correct.plan import series_of
 from stook.correct.setup import Setup, make_setup
 from stook.correct.summary import COLUMNS, summarise
 from stook.errors import InputError
@@ -47,10 +48,10 @@ def tile(assessment: Assessment, simulation: str, tile: str) -> None:
             reference = stack.enter_context(open_result(parents[-1]))
         variables = [str(name) for name in model.data_vars if model[name].dims == _BLOCK_VARIABLE]
         _check_reference(assessment, simulation, model, reference, variables)
+        step = model.attrs["time_step"]
         setup = make_setup(
-            None if reference is None else reference["time"],
-            model["time"],
-            model.attrs["time_step"],
+            None if reference is None else series_of(reference["time"], step),
+            series_of(model["time"], step),
             variables,
             assessment.correct,
             assessment.correct.calibration or assessment.periods.baseline,
@@ -64,7 +65,7 @@ def tile(assessment: Assessment, simulation: str, tile: str) -> None:
             for group in setup.groups
         ]
         grid = AnalysisGrid.from_dataset(model).coordinates()
-        attributes = {"time_step": model.attrs["time_step"], "simulation": simulation}
+        attributes = {"time_step": step, "simulation": simulation}
         grids, transfer, evaluation = (
             xr.merge(parts, join="exact").assign_coords(grid).assign_attrs(attributes)
             for parts in zip(*found, strict=True)

@@ -28,6 +28,22 @@ def relative(value, base, cap):
     return cap if value > 0.0 else 1.0
 
 
+@njit(cache=True, nogil=True, inline="always")
+def scaled(o, h, value, cap, trace):
+    """Return o changed as the model changes from h to a value, and whether the cap bit.
+
+    It is ``o * min(value / h, cap)``. Below the trace is dry, and an amount has no relative change
+    from or of nothing: where o is dry and h is wet it is o; where h is dry it is o for a dry value
+    and ``o + value - h`` for a wet one. A trace of zero means none of this.
+    """
+    if h < trace:
+        return (o if value < trace else o + (value - h)), False
+    if o < trace:
+        return o, False
+    factor = relative(value, h, cap)
+    return o * factor, factor == cap
+
+
 @njit(cache=True, nogil=True)
 def enough(sizes, minimum):
     """Tell whether every window has the least number of values."""
@@ -35,13 +51,11 @@ def enough(sizes, minimum):
 
 
 @njit(cache=True, nogil=True)
-def quantile_delta(
-    f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, ratio, cap, minimum, work, out
-):
+def quantile_delta(f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, rule, work, out):
     """Correct by quantile delta mapping (Cannon, Sobie & Murdock 2015, J. Climate 28, 6938).
 
     ``t`` is the Hazen probability of a value in its own slot of f. Additive:
-    ``F_o^-1(t) + x - F_h^-1(t)``; ratio: ``F_o^-1(t) * min(x / F_h^-1(t), cap)``.
+    ``F_o^-1(t) + x - F_h^-1(t)``; ratio: `scaled`.
 
     Parameters
     ----------
@@ -53,8 +67,8 @@ def quantile_delta(
         Its `Application`.
     o_windows, o_sizes, h_windows, h_sizes
         Calibration windows.
-    ratio, cap, minimum
-        Ratio or additive; cap of the ratio; values that a slot needs.
+    rule
+        `Rule`.
     work
         Scratch: (counts, ranks, slot sizes, o scale, h scale), see `kernels_pixels.Scratch`.
     out
@@ -81,28 +95,29 @@ def quantile_delta(
             continue
         cell = plan.cell[time]
         slot = plan.slot[cell]
-        if sizes[slot] < minimum:
+        if sizes[slot] < rule.minimum:
             return TOO_FEW, 0
         window = plan.window[cell]
         step = 0.5 * ranks[time] - 0.5
         o = value_at(o_windows[window], o_sizes[window], step * o_scale[slot] + 0.5)
         h = value_at(h_windows[window], h_sizes[window], step * h_scale[slot] + 0.5)
-        if ratio:
-            factor = relative(value, h, cap)
-            capped += factor == cap
-            out[time] = o * factor
+        if rule.ratio:
+            mapped, beyond = scaled(o, h, value, rule.cap, rule.trace)
+            out[time] = mapped
+            capped += beyond
         else:
             out[time] = o + (value - h)
     return VALID, capped
 
 
 @njit(cache=True, nogil=True)
-def quantile(f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, ratio, cap, out):
+def quantile(f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, rule, out):
     """Correct by quantile mapping, ``F_o^-1(F_h(x))``.
 
     F_h(x) is the Hazen probability of the middle rank of x among equal values of h, or linear
     between the neighbours of x. Below and above all values of h the correction of the end is kept
-    (Boe et al. 2007, Int. J. Climatol. 27, 1643), as a difference or, for a ratio, as a factor.
+    (Boe et al. 2007, Int. J. Climatol. 27, 1643): as a factor for a ratio, unless h is dry there,
+    and else as a difference.
     Parameters and returns as in `quantile_delta`.
     """
     upto = np.zeros(plan.windows, np.int64)
@@ -136,9 +151,9 @@ def quantile(f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, rat
         mapped = value_at(o_windows[window], o_sizes[window], target)
         if high == low and (low == 0 or low == size):
             end = float(row[0]) if low == 0 else float(row[size - 1])
-            if ratio:
-                factor = relative(mapped, end, cap)
-                capped += factor == cap
+            if rule.ratio and end >= rule.trace:
+                factor = relative(mapped, end, rule.cap)
+                capped += factor == rule.cap
                 mapped = value * factor
             else:
                 mapped = value + (mapped - end)
@@ -147,7 +162,7 @@ def quantile(f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, rat
 
 
 @njit(cache=True, nogil=True)
-def shift_mean(f, plan, o_windows, o_sizes, h_windows, h_sizes, ratio, cap, out):
+def shift_mean(f, plan, o_windows, o_sizes, h_windows, h_sizes, rule, out):
     """Correct by the difference, or the capped ratio, of the window means of o and h.
 
     Parameters and returns as in `quantile_delta`.
@@ -156,12 +171,12 @@ def shift_mean(f, plan, o_windows, o_sizes, h_windows, h_sizes, ratio, cap, out)
     for window in range(plan.windows):
         o = _mean(o_windows[window], o_sizes[window])
         h = _mean(h_windows[window], h_sizes[window])
-        steps[window] = relative(o, h, cap) if ratio else o - h
+        steps[window] = relative(o, h, rule.cap) if rule.ratio else o - h
     capped = 0
     for time in range(f.size):
         step = steps[plan.window[plan.cell[time]]]
-        if ratio:
-            capped += step == cap and f[time] == f[time]
+        if rule.ratio:
+            capped += step == rule.cap and f[time] == f[time]
             out[time] = f[time] * step
         else:
             out[time] = f[time] + step

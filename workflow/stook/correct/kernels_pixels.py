@@ -51,11 +51,26 @@ class Scratch(NamedTuple):
 
 
 class Rule(NamedTuple):
-    """How to map: method code, ratio or additive, cap, values a window needs, nodes (0: all)."""
+    """How to map.
+
+    Attributes
+    ----------
+    method
+        Code of `METHODS`.
+    ratio, cap
+        Ratio or additive; largest ratio.
+    trace
+        Amount below which a value is dry; 0 where nothing is dry.
+    minimum
+        Values that a window needs.
+    nodes
+        Quantiles kept of each calibration window; 0 for all.
+    """
 
     method: int
     ratio: bool
     cap: float
+    trace: float
     minimum: int
     nodes: int
 
@@ -145,34 +160,17 @@ def _calibrate(o, h, o_plan, h_plan, rule, scratch):
 @njit(cache=True, nogil=True)
 def _apply(f, f_plan, rule, scratch, work, out):
     """Correct one series; return its reason code and the number of capped ratios."""
-    o_windows, o_sizes = scratch.o_windows, scratch.o_sizes
-    h_windows, h_sizes = scratch.h_windows, scratch.h_sizes
-    ratio, cap = rule.ratio, rule.cap
+    o, o_sizes = scratch.o_windows, scratch.o_sizes
+    h, h_sizes = scratch.h_windows, scratch.h_sizes
     if rule.method == MEAN:
-        return VALID, shift_mean(f, f_plan, o_windows, o_sizes, h_windows, h_sizes, ratio, cap, out)
+        return VALID, shift_mean(f, f_plan, o, o_sizes, h, h_sizes, rule, out)
     packed = scratch.packed
     count = sort_places(f, scratch.narrow, packed, scratch.spare, scratch.bins)
     if count == 0:
         return _MISSING, 0
     if rule.method == QUANTILE:
-        return VALID, quantile(
-            f, packed, count, f_plan, o_windows, o_sizes, h_windows, h_sizes, ratio, cap, out
-        )
-    return quantile_delta(
-        f,
-        packed,
-        count,
-        f_plan,
-        o_windows,
-        o_sizes,
-        h_windows,
-        h_sizes,
-        ratio,
-        cap,
-        rule.minimum,
-        work,
-        out,
-    )
+        return VALID, quantile(f, packed, count, f_plan, o, o_sizes, h, h_sizes, rule, out)
+    return quantile_delta(f, packed, count, f_plan, o, o_sizes, h, h_sizes, rule, work, out)
 
 
 @njit(cache=True, nogil=True)

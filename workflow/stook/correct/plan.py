@@ -24,12 +24,13 @@ def series_of(time: xr.DataArray, step: TimeStep) -> Series:
     )
 
 
-def rule_of(choice: VariableCorrection, ratio: bool, step: TimeStep) -> Rule:
+def rule_of(choice: VariableCorrection, ratio: bool, trace: float, step: TimeStep) -> Rule:
     """Return how the kernels map, from the choices of the assessment file."""
     return Rule(
         METHODS[choice.method],
         ratio,
         choice.ratio_cap,
+        trace,
         minimum_count(choice.minimum_values, step),
         0 if choice.nodes == "all" else choice.nodes,
     )

@@ -6,28 +6,32 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
-import xarray as xr
 
 from stook.assessment.schema import Correct, VariableCorrection
 from stook.correct.kernels_pixels import Rule
 from stook.correct.kernels_windows import Application, Calibration
-from stook.correct.plan import application_plan, calibration_plan, rule_of, series_of
-from stook.correct.windows import Series, TimeStep
+from stook.correct.plan import application_plan, calibration_plan, rule_of
+from stook.correct.windows import Series
 from stook.errors import InputError
 
 PAIR = ("tasmin", "tasmax")
 MEAN_TEMPERATURE, DIURNAL_RANGE = "mean_temperature", "diurnal_range"
-SAMPLES = ("first half", "second half")
-"""Halves of the calibration period; each is evaluated with the correction of the other."""
+HALVES = ("first half", "second half")
+ALTERNATE = ("even years", "odd years")
+"""Samples of the calibration period; each is evaluated with the correction of its complement."""
 
 
 @dataclass(frozen=True)
 class Quantity:
-    """What is mapped: a variable, or the mean or the range of the temperature pair."""
+    """What is mapped: a variable, or the mean or the range of the temperature pair.
+
+    `trace` is the amount below which a value is dry, 0 for all but precipitation.
+    """
 
     name: str
     choice: VariableCorrection
     ratio: bool
+    trace: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -123,14 +127,16 @@ def quantities_of(group: tuple[str, ...], correct: Correct) -> list[Quantity]:
         found = [Quantity(MEAN_TEMPERATURE, choice, False), Quantity(DIURNAL_RANGE, choice, True)]
     else:
         choices = {name: correct.choice(name) for name in group}
-        found = [Quantity(name, choice, choice.kind == "ratio") for name, choice in choices.items()]
+        found = [
+            Quantity(name, choice, choice.kind == "ratio", choice.trace if name == "pr" else 0.0)
+            for name, choice in choices.items()
+        ]
     return [quantity for quantity in found if quantity.choice.method != "none"]
 
 
 def make_setup(
-    reference: xr.DataArray | None,
-    model: xr.DataArray,
-    step: TimeStep,
+    reference: Series | None,
+    model: Series,
     variables: Sequence[str],
     correct: Correct,
     calibration: tuple[int, int],
@@ -143,10 +149,8 @@ def make_setup(
     Parameters
     ----------
     reference, model
-        Time coordinates (cftime) of reference and simulation; no reference where nothing is
+        Time axes of reference and simulation, of one time step; no reference where nothing is
         corrected.
-    step
-        Time step of both.
     variables
         Variables of the simulation.
     correct, calibration, horizons, simulation, seed
@@ -157,31 +161,46 @@ def make_setup(
     InputError
         If reference and simulation share fewer than two years of calibration.
     """
-    f = series_of(model, step)
-    o = None if reference is None else series_of(reference, step)
+    o, f = reference, model
     groups = groups_of(variables)
     first, last = _common_years(o, f, calibration, simulation)
     quantities = [quantity for group in groups for quantity in quantities_of(group, correct)]
     everything = np.arange(len(f))
     calibrated = np.flatnonzero(f.years(first, last))
-    samples: list[Sample] = []
+    samples: tuple[Sample, ...] = ()
     if o is None:
         whole = Part(everything[:0], everything[:0], everything, {})
     else:
         inside = np.flatnonzero(o.years(first, last))
         whole = _part(o, f, inside, calibrated, everything, quantities)
-        for name, early in zip(SAMPLES, (True, False), strict=True):
-            middle = first + (last - first + 1) // 2
-            o_here = inside[(o.year[inside] < middle) == early]
-            o_other = inside[(o.year[inside] < middle) != early]
-            here = calibrated[(f.year[calibrated] < middle) == early]
-            other = calibrated[(f.year[calibrated] < middle) != early]
-            samples.append(Sample(name, o_here, _part(o, f, o_other, other, here, quantities)))
+        samples = _samples(o, f, inside, calibrated, quantities)
     wanted = {"calibration": (first, last)} | dict(horizons)
     periods = tuple(_period(name, years, f) for name, years in wanted.items())
-    return Setup(
-        simulation, seed, correct, groups, o, f, (first, last), whole, tuple(samples), periods
-    )
+    return Setup(simulation, seed, correct, groups, o, f, (first, last), whole, samples, periods)
+
+
+def _samples(
+    o: Series,
+    f: Series,
+    o_times: np.ndarray,
+    f_times: np.ndarray,
+    quantities: Sequence[Quantity],
+) -> tuple[Sample, ...]:
+    """Return the samples: the times of both series, split by halves and by alternate years."""
+    years = np.unique(f.year[f_times])
+    middle = years[0] + len(years) // 2
+    tests = {
+        HALVES[0]: lambda year: year < middle,
+        HALVES[1]: lambda year: year >= middle,
+        ALTERNATE[0]: lambda year: year % 2 == 0,
+        ALTERNATE[1]: lambda year: year % 2 == 1,
+    }
+    found = []
+    for name, test in tests.items():
+        o_here, f_here = test(o.year[o_times]), test(f.year[f_times])
+        part = _part(o, f, o_times[~o_here], f_times[~f_here], f_times[f_here], quantities)
+        found.append(Sample(name, o_times[o_here], part))
+    return tuple(found)
 
 
 def _part(
@@ -192,18 +211,29 @@ def _part(
     f_times: np.ndarray,
     quantities: Sequence[Quantity],
 ) -> Part:
-    mappings = {}
-    o_part, h_part, f_part = o.part(o_times), f.part(h_times), f.part(f_times)
-    for quantity in quantities:
-        choice = quantity.choice
-        mappings[quantity.name] = Tables(
-            quantity,
-            calibration_plan(o_part, choice),
-            calibration_plan(h_part, choice),
-            application_plan(f_part, choice, int(h_part.year[0])),
-            rule_of(choice, quantity.ratio, o.step),
-        )
+    series = (o.part(o_times), f.part(h_times), f.part(f_times))
+    mappings = {quantity.name: tables_of(quantity, *series) for quantity in quantities}
     return Part(o_times, h_times, f_times, mappings)
+
+
+def tables_of(quantity: Quantity, o: Series, h: Series, f: Series) -> Tables:
+    """Return the tables of a quantity.
+
+    Parameters
+    ----------
+    quantity
+        What is mapped, and how.
+    o, h, f
+        Time axes: reference and model in the calibration period, model to correct.
+    """
+    choice = quantity.choice
+    return Tables(
+        quantity,
+        calibration_plan(o, choice),
+        calibration_plan(h, choice),
+        application_plan(f, choice, int(h.year.min())),
+        rule_of(choice, quantity.ratio, quantity.trace, f.step),
+    )
 
 
 def _common_years(

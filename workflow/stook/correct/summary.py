@@ -10,6 +10,7 @@ import xarray as xr
 
 from stook.correct.grids import STAGES
 from stook.correct.kernels_scores import CHANGES, SCORES, SEASONS
+from stook.correct.setup import HALVES
 
 COLUMNS = ("simulation", "variable", "season", "stage", "statistic", "unit", "mean", "p05", "p95")
 
@@ -58,16 +59,16 @@ def summarise(simulation: str, tiles: Sequence[xr.Dataset], area: xr.DataArray) 
 def _cases(statistic: str, values: xr.DataArray) -> list[tuple[str, xr.DataArray]]:
     """Return the statistics of one variable of the file by the name they have in the table."""
     if statistic in SCORES:
-        return [(statistic, worse_sample(values))]
+        return [(statistic, worse_half(values))]
     return [
         (f"{statistic}_{horizon}", values.sel(horizon=horizon))
         for horizon in values["horizon"].values
     ]
 
 
-def worse_sample(values: xr.DataArray) -> xr.DataArray:
-    """Return, at every pixel, the sample whose value is larger in size; the first of equals."""
-    samples = values.transpose("sample", ...)
+def worse_half(values: xr.DataArray) -> xr.DataArray:
+    """Return, at every pixel, the half whose value is larger in size; the first of equals."""
+    samples = values.sel(sample=list(HALVES)).transpose("sample", ...)
     sizes = np.nan_to_num(np.abs(samples.values), nan=-1.0)
     chosen = np.argmax(sizes, axis=0)
     return samples.isel(sample=0, drop=True).copy(

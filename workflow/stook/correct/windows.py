@@ -127,15 +127,20 @@ def day_windows(series: Series, window_days: float, step_days: float) -> Members
     spacing = YEAR_DAYS / count
     width = min(max(float(window_days), spacing), YEAR_DAYS)
     place = series.position * YEAR_DAYS
-    own = np.minimum(np.floor(place / spacing), count - 1).astype(np.int64)
+    own = np.minimum(_floor(place / spacing), count - 1)
     # window w starts at (w + 1/2) * spacing - width / 2
     behind = (width - spacing) / 2
-    last = np.maximum(np.floor((place + behind) / spacing).astype(np.int64), own)
-    first = np.minimum(np.floor((place - spacing - behind) / spacing).astype(np.int64) + 1, own)
+    last = np.maximum(_floor((place + behind) / spacing), own)
+    first = np.minimum(_floor((place - spacing - behind) / spacing) + 1, own)
     number = np.minimum(last - first + 1, count)
     return Membership(
         own.astype(np.int32), (first % count).astype(np.int32), number.astype(np.int32), count
     )
+
+
+def _floor(numbers: np.ndarray) -> np.ndarray:
+    """Return the whole part; a number a rounding error below a whole one is that whole one."""
+    return np.floor(np.round(numbers, 9)).astype(np.int64)
 
 
 def year_windows(series: Series, anchor: int, width: int, step: int) -> Membership:
