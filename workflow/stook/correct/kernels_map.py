@@ -93,11 +93,11 @@ def quantile_delta(f, packed, count, plan, o_windows, o_sizes, h_windows, h_size
         if value != value:
             out[time] = math.nan
             continue
-        cell = plan.cell[time]
-        slot = plan.slot[cell]
+        cell = np.uint32(plan.cell[time])
+        slot = np.uint32(plan.cells[cell, 0])
         if sizes[slot] < rule.minimum:
             return TOO_FEW, 0
-        window = plan.window[cell]
+        window = np.uint32(plan.cells[cell, 1])
         step = 0.5 * ranks[time] - 0.5
         o = value_at(o_windows[window], o_sizes[window], step * o_scale[slot] + 0.5)
         h = value_at(h_windows[window], h_sizes[window], step * h_scale[slot] + 0.5)
@@ -127,7 +127,7 @@ def quantile(f, packed, count, plan, o_windows, o_sizes, h_windows, h_sizes, rul
     for i in range(count):
         time = packed[i] & PLACE
         value = float(f[time])
-        window = plan.window[plan.cell[time]]
+        window = plan.cells[plan.cell[time], 1]
         row = h_windows[window]
         size = h_sizes[window]
         low = below[window]
@@ -174,7 +174,7 @@ def shift_mean(f, plan, o_windows, o_sizes, h_windows, h_sizes, rule, out):
         steps[window] = relative(o, h, rule.cap) if rule.ratio else o - h
     capped = 0
     for time in range(f.size):
-        step = steps[plan.window[plan.cell[time]]]
+        step = steps[plan.cells[plan.cell[time], 1]]
         if rule.ratio:
             capped += step == rule.cap and f[time] == f[time]
             out[time] = f[time] * step

@@ -90,7 +90,7 @@ def make_scratch(
         np.empty((h.windows, h.largest + 1), dtype),
         np.empty(h.windows, np.int64),
         np.empty(rule.nodes, dtype),
-        np.empty(f.years * f.stride, np.int32),
+        np.empty(f.rows * f.stride, np.int32),
         np.empty(len(f.cell), np.int32),
         np.empty(slots, np.int64),
         np.empty(slots, np.float64),

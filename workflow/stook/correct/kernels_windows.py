@@ -26,15 +26,12 @@ class Calibration(NamedTuple):
     ----------
     first, number
         It belongs to windows ``first .. first + number - 1`` on a circle, int32, shape (time,).
-    wrap
-        Window of a number that ran past the last, int32, shape (2 * windows,).
     windows, largest
         Number of windows, and of values in the largest.
     """
 
     first: np.ndarray
     number: np.ndarray
-    wrap: np.ndarray
     windows: int
     largest: int
 
@@ -42,40 +39,39 @@ class Calibration(NamedTuple):
 class Application(NamedTuple):
     """Which windows of days and years each value of a series to correct belongs to.
 
-    Values with the same windows share a cell. A slot is a window of days and a window of years,
-    ``slot = years * windows + days``.
+    A slot is a window of days and a window of years, ``slot = years * windows + days``. Years that
+    lie in the same windows of years form a block. Values of the same windows of days and the same
+    block share a cell. The table of counts has a row a block and a column a window of days, with a
+    margin on either side.
 
     Attributes
     ----------
     cell
         Cell of each value, int32, shape (time,).
-    slot
-        Slot whose distribution the values of a cell are ranked in, int32, shape (cell,).
-    window
-        The window of days of that slot, int32, shape (cell,).
-    tally
-        Place of the slot in the table of counts, int32, shape (cell,).
-    first
-        Where the counts of the cell's windows start in the table of counts, int32, shape (cell,).
-    number, rows
-        Number of windows of days and of years, int32, shape (cell,).
-    raise_by
-        Ones for as many windows as `number`, then zeros; int32, shape (number + 1, lanes).
-    windows, years, stride
-        Number of windows of days and of years; length of a row of the table of counts.
+    cells
+        What is the same for all values of a cell, int32, shape (cell, 8): slot whose distribution
+        they are ranked in; window of days of that slot; where the counts of the cell's windows
+        start in the table of counts; number of these windows; where the counts of the slot start;
+        1 if the windows run past the last; number of blocks of the slot; 0.
+    blocks
+        Number of blocks that each window of years consists of, int32, shape (years,).
+    starts
+        Its first block, int32, shape (years,).
+    windows, years, rows
+        Number of windows of days, of windows of years, and of blocks.
+    stride, lanes
+        Length of a row of the table of counts, and of either margin.
     """
 
     cell: np.ndarray
-    slot: np.ndarray
-    window: np.ndarray
-    tally: np.ndarray
-    first: np.ndarray
-    number: np.ndarray
-    rows: np.ndarray
-    raise_by: np.ndarray
+    cells: np.ndarray
+    blocks: np.ndarray
+    starts: np.ndarray
     windows: int
     years: int
+    rows: int
     stride: int
+    lanes: int
 
 
 @njit(cache=True, nogil=True)
@@ -101,9 +97,10 @@ def deal_to_windows(values, packed, count, plan, windows, sizes):
         value = values[place]
         first = plan.first[place]
         for number in range(first, first + plan.number[place]):
-            window = plan.wrap[number]
-            windows[window, sizes[window]] = value
-            sizes[window] += 1
+            window = np.uint32(number if number < plan.windows else number - plan.windows)
+            size = np.uint32(sizes[window])
+            windows[window, size] = value
+            sizes[window] = size + np.uint32(1)
     for window in range(plan.windows):
         if sizes[window]:
             windows[window, sizes[window]] = windows[window, sizes[window] - 1]
@@ -116,8 +113,8 @@ def value_at(window, size, position):
     Linear between values, constant beyond the ends; `window` holds its last value twice.
     """
     place = min(max(position, 1.0), float(size))
-    below = int(place)
-    low = float(window[below - 1])
+    below = np.uint32(place)
+    low = float(window[below - np.uint32(1)])
     return low + (place - below) * (float(window[below]) - low)
 
 
@@ -153,7 +150,7 @@ def rank_in_windows(values, packed, count, plan, counts, ranks):
     plan
         Its `Application`.
     counts
-        Table of counts, int32, shape (years * stride,); left with the totals.
+        Table of counts, int32, shape (rows * stride,); left with the totals.
     ranks
         Filled where there is a value: twice the rank, int32, shape (time,).
     """
@@ -185,19 +182,28 @@ def rank_in_windows(values, packed, count, plan, counts, ranks):
 
 @njit(cache=True, nogil=True, inline="always")
 def _read(counts, plan, cell):
-    at = plan.tally[cell]
-    return counts[at] + counts[at + plan.windows]
+    at = np.uint64(plan.cells[cell, 4])
+    total = counts[at]
+    for _ in range(1, plan.cells[cell, 6]):
+        at += np.uint64(plan.stride)
+        total += counts[at]
+    return total
 
 
 @njit(cache=True, nogil=True, inline="always")
 def _raise(counts, plan, cell):
-    start = plan.first[cell]
-    number = plan.number[cell]
-    for _ in range(plan.rows[cell]):
-        for group in range(0, number, LANES):
-            for lane in range(LANES):
-                counts[start + group + lane] += plan.raise_by[number, group + lane]
-        start += plan.stride
+    start = np.uint64(plan.cells[cell, 2])
+    number = plan.cells[cell, 3]
+    _raise_from(counts, plan.lanes, start, number)
+    if plan.cells[cell, 5]:
+        _raise_from(counts, plan.lanes, start - np.uint64(plan.windows), number)
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _raise_from(counts, lanes, start, number):
+    for group in range(0, lanes, LANES):
+        for lane in range(LANES):
+            counts[start + np.uint64(group + lane)] += np.int32(group + lane < number)
 
 
 @njit(cache=True, nogil=True)
@@ -205,5 +211,7 @@ def slot_sizes(counts, plan, sizes):
     """Read the number of values of every slot from the table of counts, int64, shape (slots,)."""
     for years in range(plan.years):
         for window in range(plan.windows):
-            at = years * plan.stride + window
-            sizes[years * plan.windows + window] = counts[at] + counts[at + plan.windows]
+            total = 0
+            for row in range(plan.starts[years], plan.starts[years] + plan.blocks[years]):
+                total += counts[row * plan.stride + plan.lanes + window]
+            sizes[years * plan.windows + window] = total

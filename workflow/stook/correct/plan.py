@@ -39,8 +39,7 @@ def rule_of(choice: VariableCorrection, ratio: bool, trace: float, step: TimeSte
 def calibration_plan(series: Series, choice: VariableCorrection) -> Calibration:
     """Return the windows of a calibration series."""
     days = day_windows(series, choice.window_days, choice.step_days)
-    wrap = np.arange(2 * days.count, dtype=np.int32) % days.count
-    return Calibration(days.first, days.number, wrap, days.count, int(days.sizes().max(initial=0)))
+    return Calibration(days.first, days.number, days.count, int(days.sizes().max(initial=0)))
 
 
 def application_plan(series: Series, choice: VariableCorrection, anchor: int) -> Application:
@@ -57,22 +56,42 @@ def application_plan(series: Series, choice: VariableCorrection, anchor: int) ->
     """
     days = day_windows(series, choice.window_days, choice.step_days)
     years = year_windows(series, anchor, choice.cdf_years, choice.cdf_step_years)
-    stride = 2 * days.count + LANES
-    columns = (years.own, years.first, years.number, days.own, days.first, days.number)
-    cells, cell = np.unique(np.stack(columns, axis=1), axis=0, return_inverse=True)
-    own_year, first_year, rows, own_day, first_day, number = cells.T.astype(np.int32)
+    spans, block = np.unique(
+        np.stack([years.first, years.number], axis=1), axis=0, return_inverse=True
+    )
+    starts, blocks = _blocks_of_windows(spans, years.count)
+    columns = (days.own, days.first, days.number, years.own, block.ravel())
+    kinds, cell = np.unique(np.stack(columns, axis=1), axis=0, return_inverse=True)
+    own, first, number, own_years, row = kinds.T
     most = int(number.max(initial=1))
     lanes = -(-most // LANES) * LANES
+    stride = days.count + 2 * lanes
+    cells = np.zeros((len(kinds), 8), dtype=np.int32)
+    cells[:, 0] = own_years * days.count + own
+    cells[:, 1] = own
+    cells[:, 2] = row * stride + lanes + first
+    cells[:, 3] = number
+    cells[:, 4] = starts[own_years] * stride + lanes + own
+    cells[:, 5] = first + number > days.count
+    cells[:, 6] = blocks[own_years]
     return Application(
         cell.astype(np.int32).ravel(),
-        own_year * days.count + own_day,
-        own_day.copy(),
-        own_year * stride + own_day,
-        first_year * stride + first_day,
-        number.copy(),
-        rows.copy(),
-        (np.arange(lanes)[None, :] < np.arange(most + 1)[:, None]).astype(np.int32),
+        cells,
+        blocks,
+        starts,
         days.count,
         years.count,
+        len(spans),
         stride,
+        lanes,
     )
+
+
+def _blocks_of_windows(spans: np.ndarray, count: int) -> tuple[np.ndarray, np.ndarray]:
+    """Return first block and number of blocks of every window of years, int32, shape (count,).
+
+    `spans` holds, by block in order of time, its first window and its number of windows.
+    """
+    windows = np.arange(count)[:, None]
+    inside = (spans[None, :, 0] <= windows) & (windows < spans[None, :, 0] + spans[None, :, 1])
+    return inside.argmax(axis=1).astype(np.int32), inside.sum(axis=1).astype(np.int32)
