@@ -48,9 +48,7 @@ def unknown_calendar(case):
 def gap_in_time(case):
     keep = np.r_[0:400, 431:7305]  # the record begins on 1 January 1991
     path = case.rewritten(TASMAX, lambda dataset: dataset.isel(time=keep))
-    return [], (
-        f"{path}: gap between 1992-02-04 and 1992-03-07; a daily series needs every step"
-    )
+    return [], (f"{path}: gap between 1992-02-04 and 1992-03-07; a daily series needs every step")
 
 
 def reference_too_short(case):
@@ -91,7 +89,9 @@ def unknown_key(case):
 
 def unavailable_index(case):
     path = case.text(
-        RESPONSE, "heat: {measure: degree-days, base: 30.0}", "heat: {measure: mean, variable: rsds}"
+        RESPONSE,
+        "heat: {measure: degree-days, base: 30.0}",
+        "heat: {measure: mean, variable: rsds}",
     )
     return [], f"{path}: index heat needs rsds; observed and {SIMULATION} have none"
 
@@ -120,7 +120,9 @@ def area_without_calendar(case):
     with xr.open_dataset(case.folder / "crops/barley_rainfed_area.nc") as areas:
         cells = [
             float(row.sum()) * 6371.0**2 * 100 * np.deg2rad(1) * np.diff(np.sin(np.deg2rad(edges)))
-            for row, edges in zip(areas["harvested_share"], ([39.5, 40.5], [40.5, 41.5]))
+            for row, edges in zip(
+                areas["harvested_share"], ([39.5, 40.5], [40.5, 41.5]), strict=True
+            )
         ]
     return [], (
         f"{path}: barley, rainfed has crop area without calendar in 12 of 20 pixels, "
@@ -132,8 +134,7 @@ def area_without_calendar(case):
 def results_not_writable(case):
     path = case.own("districts.gpkg")
     return ["--set", f"results={path.name}"], (
-        f"{path}/hollin-tiny: {path} is no folder; "
-        "give another with --set results=FOLDER"
+        f"{path}/hollin-tiny: {path} is no folder; give another with --set results=FOLDER"
     )
 
 

@@ -22,14 +22,13 @@ def main() -> int:
 
     Inside a run the job is handed to the run's server, which has the libraries loaded.
     """
-    import signal
     import sys
 
     from stook.engine.forkserver import SINGLE_THREADED, ask
 
     os.environ.update(SINGLE_THREADED)
     _end_with_parent()
-    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
+    end_once()
     status = ask(sys.argv[1:])
     return run_arguments(sys.argv[1:]) if status is None else status
 
@@ -77,6 +76,26 @@ def run_job(stage: str, name: str, results: str, wildcards: dict[str, str], thre
     function = getattr(importlib.import_module(f"stook.{stage}.job"), name)
     with dask.config.set(scheduler="threads", num_workers=threads):
         function(load_resolved(results), **wildcards)
+
+
+def end_once() -> None:
+    """Let the first signal end this job; those that follow must not disturb its clean-up.
+
+    Ctrl-C reaches a job from the terminal and, as SIGTERM, from the run.
+    """
+    import signal
+    import sys
+    from types import FrameType
+
+    def stop(number: int, frame: FrameType | None) -> None:
+        for each in (signal.SIGINT, signal.SIGTERM):
+            signal.signal(each, signal.SIG_IGN)
+        if number == signal.SIGINT:
+            raise KeyboardInterrupt
+        sys.exit(143)
+
+    for each in (signal.SIGINT, signal.SIGTERM):
+        signal.signal(each, stop)
 
 
 def _end_with_parent() -> None:

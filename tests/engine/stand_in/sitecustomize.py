@@ -14,6 +14,7 @@ from __future__ import annotations
 import importlib.abc
 import importlib.machinery
 import os
+import re
 import sys
 import time
 from pathlib import Path
@@ -27,39 +28,14 @@ STAGES = ("prepare", "correct", "season", "yields", "regions", "ensemble", "tren
 
 
 def outputs(layout, rule, given):
-    """Return the files a rule writes."""
-    sim, crop, system, tile, scenario = (
-        given.get(key) for key in ("simulation", "crop", "system", "tile", "scenario")
-    )
-    return {
-        "regions_overlay": lambda: [layout.overlay],
-        "regions_totals": lambda: [layout.totals(sim, crop)],
-        "prepare_layers": lambda: [layout.layers],
-        "prepare_tile": lambda: [layout.prepared(sim, tile)],
-        "correct_tile": lambda: [
-            layout.corrected(sim, tile),
-            layout.transfer(sim, tile),
-            layout.evaluation(sim, tile),
-        ],
-        "correct_summary": lambda: [layout.evaluation_table],
-        "season_tile": lambda: [layout.season(sim, crop, system, tile)],
-        "yields_coefficients": lambda: [layout.coefficients(crop, system)],
-        "yields_grid": lambda: [layout.yields(sim, crop, system)],
-        "ensemble_changes": lambda: [layout.changes, layout.members, layout.yearly],
-        "ensemble_pixels": lambda: [layout.ensemble_pixels(crop, system, scenario)],
-        "ensemble_risk": lambda: [layout.ensemble_table(name) for name in RISK],
-        "ensemble_robustness": lambda: [
-            layout.robustness_pixels(crop, system, scenario),
-            layout.area_losses(crop, system, scenario),
-        ],
-        "trend_pixels": lambda: [
-            layout.trend_pixels(sim, crop, system),
-            layout.trend_distribution(sim, crop, system),
-            layout.trend_field(sim, crop, system),
-        ],
-        "trend_regions": lambda: [layout.trend_regions(sim)],
-        "report_page": lambda: [layout.report_page],
-    }[rule]()
+    """Return the files a rule writes, as its rule file says."""
+    from stook.engine.run import snakefile
+
+    rules = snakefile().parent / "rules" / f"{rule.partition('_')[0]}.smk"
+    block = rules.read_text(encoding="utf-8").split(f"rule {rule}:\n")[1].split("\nrule ")[0]
+    section = re.search(r"^    output:\n((?: {8}.*\n)+)", block, re.MULTILINE)[1]
+    paths = eval(f"dict({section})", {"LAYOUT": layout})
+    return [Path(str(path).format(**given)) for path in paths.values()]
 
 
 def matches(variable, rule, given):

@@ -126,11 +126,10 @@ def _load() -> None:
 
 def _run(connection: socket.socket) -> None:
     """Run one job in this forked process, report its status and end the process."""
-    from stook.job import run_arguments
+    from stook.job import end_once, run_arguments
 
     signal.signal(signal.SIGCHLD, signal.SIG_DFL)
-    signal.signal(signal.SIGINT, signal.default_int_handler)
-    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
+    end_once()
     status = 1
     try:
         head, files, _, _ = socket.recv_fds(connection, _LENGTH, 2)
