@@ -8,8 +8,9 @@ import numpy as np
 import pandas as pd
 from scipy import stats
 
+from stook.fit.design import Design, make_design
 from stook.fit.document import Fit
-from stook.fit.estimate import LEVEL, Design, Estimate, make_design
+from stook.fit.estimate import LEVEL, Estimate
 from stook.fit.panel import Sample
 from stook.fit.validation import leave_units_out, leave_years_out
 from stook.season.definition import IndexDefinition, unit_of

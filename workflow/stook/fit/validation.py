@@ -7,8 +7,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 import pandas as pd
 
+from stook.fit.design import Design
 from stook.fit.document import Fit
-from stook.fit.estimate import Design
 from stook.fit.kernels import take_out
 from stook.fit.panel import Sample
 from stook.randomness import generator
