@@ -196,7 +196,7 @@ def _from_steps(
     harvest: float = (year - sown) * days_in_year(sown, calendar)
     harvest += maturity * days_in_year(year, calendar) / 365
     begin, end = (sowing + fraction * (harvest - sowing) for fraction in fractions)
-    total = shared = 0.0
+    total = shared = season = 0.0
     for number, time in enumerate(times):
         if time_step == "monthly":
             first = cftime.datetime(time.year, time.month, 1, calendar=calendar)
@@ -205,12 +205,13 @@ def _from_steps(
         else:
             first = cftime.datetime(time.year, *_DAY_ZERO, calendar=calendar)
             last = cftime.datetime(time.year + 1, *_DAY_ZERO, calendar=calendar)
+        season += max(min((last - zero).days, harvest) - max((first - zero).days, sowing), 0)
         days = min((last - zero).days, end) - max((first - zero).days, begin)
         if days > 0:
             values = {name: float(one[number]) for name, one in series.items()}
             wanted = values["pr"] if isinstance(definition, Total) else _level(definition, values)
             total += wanted * days
             shared += days
-    if abs(shared - (end - begin)) > 1e-6:
+    if abs(season - (harvest - sowing)) > 1e-6:
         return math.nan
     return total / shared * (real_days if isinstance(definition, Total) else 1.0)
