@@ -170,7 +170,11 @@ def prepare_series(
         )
 
     data = da.map_blocks(
-        block, chunks=chunks, dtype=np.float32, meta=np.empty((0, 0, 0), dtype=np.float32)
+        block,
+        chunks=chunks,
+        dtype=np.float32,
+        meta=np.empty((0, 0, 0), dtype=np.float32),
+        name=f"prepared-{series.variable}",  # else the whole series is hashed for one
     )
     attributes = variable_attributes(series.variable, series.step)
     attributes["comment"] = f"regridded: {_method_words(series)}; unit in the files: {series.unit}"
