@@ -106,6 +106,10 @@ def write_run(
         coordinates | {"horizon": ["late"]},
     )
     regions = [region] if region else REGIONS
+    classes = pd.DataFrame({"crop": "maize", "region": [*regions, "all regions"]}).merge(
+        pd.DataFrame({"number": [0, 1, 2], "share": [0.2, 0.3, 0.5]}), how="cross"
+    )
+    classes.loc[classes["region"] == "all regions", "share"] += 0.01 * len(regions)
     with Job(assessment, "invented", [folder / "pr.nc", folder / "maize.yaml"]) as job:
         job.netcdf(layers, layout.layers, "layers")
         for tile in range(tile_count(assessment)):
@@ -120,6 +124,7 @@ def write_run(
         job.netcdf(change, layout.ensemble_pixels("maize", "rainfed", "high"), "pixels")
         job.table(_totals(heat, regions), layout.totals(SIMULATION, "maize"))
         job.table(_changes(heat, regions), layout.changes)
+        job.table(classes, layout.ensemble_table("classes"))
         shares = pd.DataFrame(
             {"quantity": "heat", "period": "all", "kind": "observed"}
             | {"bin_low": [0.0], "bin_high": [1.0], "area_share": [float(len(regions))]}

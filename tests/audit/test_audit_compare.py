@@ -204,3 +204,14 @@ def test_exit_status(plain: Path, hotter: Path, capsys: pytest.CaptureFixture[st
     assert json.loads(capsys.readouterr().out)["identical"] is False
     with pytest.raises(AssessmentError, match="no stage seasons; give one of prepare, "):
         compare_folders(plain, hotter, out, err, stages=["seasons"])
+
+
+def test_rows_are_told_apart_by_what_differs(plain: Path, tmp_path: Path) -> None:
+    root = write_run(tmp_path)
+    path = root / "ensemble" / "classes.parquet"
+    table = pd.read_parquet(path)
+    table.loc[table["region"].eq("Thornfold") & table["number"].eq(2), "share"] = 0.75
+    table.sample(frac=1, random_state=1).to_parquet(path, index=False)  # in another order
+    row = compare(plain, root).files.set_index("file").loc["ensemble/classes.parquet"]
+    assert (row["compared"], row["differing"], row["variable"]) == (9, 1, "share")
+    assert (row["where"], row["largest_difference"]) == ("maize, Thornfold, 2", 0.25)

@@ -134,6 +134,33 @@ def verify(
     OUT.print("every file is as recorded")
 
 
+@app.command()
+def compare(
+    a: Annotated[Path, typer.Argument(metavar="A", help="A results folder.")],
+    b: Annotated[Path, typer.Argument(metavar="B", help="Another results folder.")],
+    csv: Annotated[
+        Path | None,
+        typer.Option("--csv", metavar="FOLDER", help="Write every table here as CSV."),
+    ] = None,
+    json: Annotated[
+        bool, typer.Option("--json", help="Print one JSON object instead of tables.")
+    ] = False,
+    stage: Annotated[
+        list[str] | None,
+        typer.Option("--stage", metavar="STAGE", help="Read files of this stage only; repeatable."),
+    ] = None,
+) -> None:
+    """Say what differs between two runs: settings, inputs, regions, pixels, files.
+
+    Exit status 0 if all values are identical, 3 if some differ.
+    """
+    from stook.audit.compare_output import compare_folders
+
+    wide = OUT if OUT.is_terminal or json else Console(width=TABLE_WIDTH, highlight=False)
+    if status := compare_folders(a, b, wide, ERR, stage or (), csv, as_text=not json):
+        raise typer.Exit(status)
+
+
 def _run(
     file: Path,
     overrides: list[str] | tuple[str, ...] = (),

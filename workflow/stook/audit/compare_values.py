@@ -14,7 +14,7 @@ import pandas as pd
 import xarray as xr
 
 from stook.assessment.layout import Layout
-from stook.errors import ResultsError
+from stook.ensemble.summary import TOTAL
 from stook.grids.files import PIXEL_CHUNK, open_result, read_table
 from stook.trend.field import EVERYWHERE
 
@@ -37,7 +37,7 @@ _KEYS = (
     *("draw", "year", "variable", "season", "stage", "statistic", "quantity", "period", "kind"),
     *("bin_low", "bin_high"),
 )
-_WHOLE_RUN = re.compile(r"correct/evaluation\.parquet$|_distribution\.parquet$")
+_WHOLE_RUN = re.compile(r"(evaluation|_distribution|/joint)\.parquet$")
 _BLOCK_VALUES = 4_000_000
 
 
@@ -148,12 +148,10 @@ def compare_file(
 def _compare_tables(name: str, a: Path, b: Path, scope: Scope) -> dict[str, Any]:
     """Compare the rows both tables have; of runs of other parts, no row over the whole run."""
     one, other = read_table(a), read_table(b)
-    keys = [key for key in _KEYS if key in one and key in other]
+    if "region" in one and "region" in other and not scope.same_part:
+        one, other = (t[~t["region"].isin([EVERYWHERE, TOTAL])] for t in (one, other))
+    one, other, keys = _with_keys(one, other)
     values = [str(column) for column in one if column in other and column not in keys]
-    if "region" in keys and not scope.same_part:
-        one, other = (frame[frame["region"] != EVERYWHERE] for frame in (one, other))
-    if not keys or one.duplicated(keys).any() or other.duplicated(keys).any():
-        raise ResultsError(f"{a}: rows cannot be told apart; delete it and run again")
     both = one[[*keys, *values]].merge(other[[*keys, *values]], on=keys, suffixes=("_a", "_b"))
     found = _Largest()
     if scope.same_part:
@@ -163,10 +161,39 @@ def _compare_tables(name: str, a: Path, b: Path, scope: Scope) -> dict[str, Any]
         place = _count(left, right, np.ones(len(both), dtype=bool), found)
         if place is not None:
             position, difference = place
-            where = ", ".join(str(both[key].iloc[position]) for key in keys)
+            where = ", ".join(str(both[key].iloc[position]) for key in keys[:-1])
             found.size = abs(difference)
             found.detail = (value, difference, where, left[position], right[position])
     return found.row(name)
+
+
+def _with_keys(
+    one: pd.DataFrame, other: pd.DataFrame
+) -> tuple[pd.DataFrame, pd.DataFrame, list[str]]:
+    """Return the tables and the columns that tell their rows apart.
+
+    Columns that name things come first; if they do not suffice, the first others that do, and the
+    number of the row among its equals.
+    """
+    categories = {
+        str(name): "str" for name in one if isinstance(one[name].dtype, pd.CategoricalDtype)
+    }
+    tables = [one.astype(categories), other.astype({k: "str" for k in categories if k in other})]
+    common = [str(name) for name in one if name in other]
+    keys = [key for key in _KEYS if key in common]
+    for column in common:
+        if not tables[0].duplicated(keys or None).any():
+            break
+        before = tables[0].duplicated(keys).sum() if keys else len(one)
+        if column not in keys and tables[0].duplicated([*keys, column]).sum() < before:
+            keys.append(column)
+    numbered = [
+        table.assign(row=table.groupby(keys, dropna=False, sort=False).cumcount())
+        if keys
+        else table.assign(row=np.arange(len(table)))
+        for table in tables
+    ]
+    return numbered[0], numbered[1], [*keys, "row"]
 
 
 def _count(

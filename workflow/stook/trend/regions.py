@@ -9,6 +9,7 @@ import pandas as pd
 
 from stook.constants import CENTRAL_DRAW
 from stook.trend.breakpoint import find_break
+from stook.trend.detrend import mean_of_years
 from stook.trend.periods import is_covered
 from stook.trend.pixels import YEARS_PER_DECADE
 from stook.trend.series import TrendOptions, draw, series_trends
@@ -81,7 +82,8 @@ def regional_trends(
         the options stand last.
     """
     years = yields.index.to_numpy().astype(np.int64)
-    base = yields[(years >= baseline[0]) & (years <= baseline[1])].mean().to_numpy()
+    inside = (years >= baseline[0]) & (years <= baseline[1])
+    base = mean_of_years(yields.to_numpy(dtype=np.float64)[inside])
     parts = []
     for name, (first, last) in periods.items():
         if yields.empty or not is_covered((first, last), years):
