@@ -19,6 +19,7 @@ import time
 from pathlib import Path
 
 import dask
+import netCDF4
 import numpy as np
 import xarray as xr
 from stook.grids.analysis import AnalysisGrid
@@ -31,23 +32,25 @@ UNITS = {"tas": "K", "pr": "kg m-2 s-1"}
 
 
 def write_source(path: Path, variable: str, rows: int, columns: int, years: int) -> None:
-    """Write an invented field: a smooth season and noise, in the unit of a model."""
+    """Write an invented field year by year: a season and noise, in the unit of a model."""
     random = np.random.default_rng(5)
-    days = 365 * years
-    season = np.sin(np.arange(days) * 2 * np.pi / 365)[:, None, None]
-    noise = random.standard_normal((days, rows, columns)).astype("f4")
-    values = 285 + 10 * season + 4 * noise if variable == "tas" else np.abs(noise) * 1e-5
-    axes = {
-        "lat": ("lat", np.arange(rows) + 0.5, {"units": "degrees_north"}),
-        "lon": ("lon", np.arange(columns) + 0.5, {"units": "degrees_east"}),
-        "time": ("time", np.arange(days) + 0.5),
-    }
-    dataset = xr.Dataset({variable: (("time", "lat", "lon"), values.astype("f4"))}, axes)
-    dataset[variable].attrs["units"] = UNITS[variable]
-    dataset["time"].attrs = {"units": "days since 1981-01-01", "calendar": "noleap"}
-    chunks = (min(365, days), min(30, rows), min(30, columns))
-    options = {variable: {"zlib": True, "complevel": 1, "chunksizes": chunks}}
-    dataset.to_netcdf(path, encoding=options)
+    season = 285 + 10 * np.sin(np.arange(365) * 2 * np.pi / 365)[:, None, None].astype("f4")
+    with netCDF4.Dataset(path, "w") as file:
+        for name, size in (("time", 365 * years), ("lat", rows), ("lon", columns)):
+            file.createDimension(name, size)
+            file.createVariable(name, "f8", (name,))[:] = np.arange(size) + 0.5
+        file["lat"][:] = np.arange(rows) + 0.5 - rows / 2
+        file["lat"].units, file["lon"].units = "degrees_north", "degrees_east"
+        file["time"].units, file["time"].calendar = "days since 1981-01-01", "noleap"
+        chunks = (365, min(30, rows), min(30, columns))
+        data = file.createVariable(
+            variable, "f4", ("time", "lat", "lon"), zlib=True, complevel=1, chunksizes=chunks
+        )
+        data.units = UNITS[variable]
+        for year in range(years):
+            noise = random.standard_normal((365, rows, columns), dtype="f4")
+            values = season + 4 * noise if variable == "tas" else np.abs(noise) * np.float32(1e-5)
+            data[365 * year : 365 * (year + 1)] = values
 
 
 def prepare(source: Path, variable: str, grid: AnalysisGrid, path: Path) -> float:
@@ -79,7 +82,7 @@ def main() -> None:
     parser.add_argument("--repeats", type=int, default=3)
     parser.add_argument("--json", action="store_true")
     given = parser.parse_args()
-    lat_edges = np.arange(2 * given.rows + 1) / 2
+    lat_edges = (np.arange(2 * given.rows + 1) - given.rows) / 2
     lon_edges = np.arange(2 * given.columns + 1) / 2
     grid = AnalysisGrid(lat_edges[:-1] + 0.25, lon_edges[:-1] + 0.25, lat_edges, lon_edges)
     ratios = {}

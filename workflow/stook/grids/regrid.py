@@ -274,37 +274,83 @@ def weighted_mean(
     result
         Filled; float32 or float64, shape (time, target lat, target lon).
     """
-    row_start, row_index, row_weight = rows
-    column_start, column_index, column_weight = columns
     steps, height, width = result.shape
-    for t in range(steps):
-        for i in range(height):
+    most = max(1, np.max(np.diff(rows[0])) * np.max(np.diff(columns[0])))
+    place = np.empty((width, most), dtype=np.int64)
+    weight = np.empty((width, most), dtype=np.float64)
+    count = np.empty(width, dtype=np.int64)
+    whole = np.empty(width, dtype=np.float64)
+    flat = values.reshape((values.shape[0], values.shape[1] * values.shape[2]))
+    for i in range(height):
+        for j in range(width):
+            count[j], whole[j] = 0, 0.0
+            if wanted[i, j]:
+                count[j], whole[j] = _gather(
+                    i, j, rows, columns, values.shape[2], importance, place[j], weight[j]
+                )
+        for t in range(steps):
+            line = flat[t]
             for j in range(width):
-                result[t, i, j] = np.nan
-                if not wanted[i, j]:
-                    continue
                 total = 0.0
-                weights = 0.0
-                single = 0.0
-                count = 0
-                for a in range(row_start[i], row_start[i + 1]):
-                    for b in range(column_start[j], column_start[j + 1]):
-                        value = np.float64(values[t, row_index[a], column_index[b]])
-                        if np.isnan(value):
-                            continue
-                        weight = row_weight[a] * column_weight[b]
-                        if importance is not None:
-                            weight *= importance[row_index[a], column_index[b]]
-                            if not weight > 0.0:
-                                continue
-                        total += weight * value
-                        weights += weight
-                        single = value
-                        count += 1
-                if count == 0 or weights < least:
-                    continue
-                mean = single if count == 1 else total / weights
+                for k in range(count[j]):
+                    total += weight[j, k] * np.float64(line[place[j, k]])
+                if np.isnan(total):
+                    mean = _mean_of_valid(line, place[j], weight[j], count[j], least)
+                elif count[j] == 0 or whole[j] < least:
+                    mean = np.nan
+                elif count[j] == 1:
+                    mean = np.float64(line[place[j, 0]])
+                else:
+                    mean = total / whole[j]
                 result[t, i, j] = scale * mean + offset
+
+
+@njit(cache=True, nogil=True)
+def _gather(
+    i: int,
+    j: int,
+    rows: tuple[np.ndarray, np.ndarray, np.ndarray],
+    columns: tuple[np.ndarray, np.ndarray, np.ndarray],
+    width: int,
+    importance: np.ndarray | None,
+    place: np.ndarray,
+    weight: np.ndarray,
+) -> tuple[int, float]:  # pragma: no cover - compiled
+    """List the source cells of a target pixel, row by row; return their number and weight."""
+    count = 0
+    total = 0.0
+    for a in range(rows[0][i], rows[0][i + 1]):
+        for b in range(columns[0][j], columns[0][j + 1]):
+            share = rows[2][a] * columns[2][b]
+            if importance is not None:
+                share *= importance[rows[1][a], columns[1][b]]
+            if share > 0.0:
+                place[count] = rows[1][a] * width + columns[1][b]
+                weight[count] = share
+                total += share
+                count += 1
+    return count, total
+
+
+@njit(cache=True, nogil=True)
+def _mean_of_valid(
+    line: np.ndarray, place: np.ndarray, weight: np.ndarray, count: int, least: float
+) -> float:  # pragma: no cover - compiled
+    """Return the mean of the cells that have a value; NaN if they weigh less than `least`."""
+    total = 0.0
+    weights = 0.0
+    single = np.nan
+    there = 0
+    for k in range(count):
+        value = np.float64(line[place[k]])
+        if not np.isnan(value):
+            total += weight[k] * value
+            weights += weight[k]
+            single = value
+            there += 1
+    if there == 0 or weights < least:
+        return np.nan
+    return single if there == 1 else total / weights
 
 
 @njit(cache=True, nogil=True)
