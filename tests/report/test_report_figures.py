@@ -15,7 +15,7 @@ from matplotlib.patches import PathPatch
 from shapely.geometry import box
 from stook.grids.analysis import AnalysisGrid
 from stook.report.figures_correct import correction_figure
-from stook.report.figures_drivers import effects_in_percent
+from stook.report.figures_drivers import drivers_figure, effects_in_percent
 from stook.report.figures_maps import cells_outline, change_maps, diverging
 from stook.report.figures_series import range_figure
 from stook.report.figures_trend import trend_figure
@@ -165,3 +165,19 @@ def test_bands_are_north_up() -> None:
     assert list(stack["y"].values) == [1.5, 0.5]
     assert stack.values[0, 0].tolist() == [0.0, 10.0, 20.0]
     assert stack.rio.bounds() == (10.0, 0.0, 13.0, 2.0)
+
+
+def test_every_crop_has_its_own_terms_on_its_axis() -> None:
+    rows = [
+        ("maize", "heat", "percent", -8.0),
+        ("maize", "rain", "percent", 1.0),
+        ("barley", "warmth", "t ha-1", -0.2),
+    ]
+    effects = pd.DataFrame(rows, columns=["crop", "quantity", "unit", "value"]).assign(
+        simulation="ALDER-ESM_high_r1", scenario="high", system="rainfed", period="late"
+    )
+    axes = drivers_figure(effects, "late", ["high"]).figure.axes
+    labels = [[text.get_text() for text in axis.get_yticklabels()] for axis in axes]
+    assert labels == [["heat", "rain"], ["warmth"]]
+    assert [axis.get_xlabel() for axis in axes] == ["effect on yield, %", "effect on yield, t/ha"]
+    assert axes[1].get_xlim()[0] > -1  # a scale of its own

@@ -34,11 +34,10 @@ def drivers_figure(effects: pd.DataFrame, horizon: str, scenarios: Sequence[str]
     """
     rows = effects[(effects["period"] == horizon) & (effects["scenario"] != OBSERVED)]
     cells = list(dict.fromkeys(zip(rows["crop"], rows["system"], strict=True)))
-    terms = rows["quantity"].nunique()
+    terms = rows.groupby(["crop", "system"])["quantity"].nunique().max()
     with drawing_settings():
         look = looks(scenarios)
-        columns = min(3, len(cells))
-        figure, axes = panels(len(cells), columns, 0.55 + 0.32 * terms)
+        figure, axes = panels(len(cells), min(2, len(cells)), 0.75 + 0.32 * terms, shared=False)
         for axis, (crop, system) in zip(axes, cells, strict=True):
             chosen = rows[(rows["crop"] == crop) & (rows["system"] == system)]
             _terms(axis, chosen, look)

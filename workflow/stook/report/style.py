@@ -117,12 +117,14 @@ def new_figure(height: float, width: float = WIDTH) -> Figure:
     return Figure(figsize=(width, height), layout="constrained")
 
 
-def panels(count: int, columns: int, row_height: float) -> tuple[Figure, list[Axes]]:
-    """Return a figure with `count` panels in rows of `columns`, sharing both axes."""
+def panels(
+    count: int, columns: int, row_height: float, shared: bool = True
+) -> tuple[Figure, list[Axes]]:
+    """Return a figure with `count` panels in rows of `columns`, sharing both axes or none."""
     columns = min(columns, count)
     rows = -(-count // columns)
     figure = new_figure(0.6 + rows * row_height)
-    grid = figure.subplots(rows, columns, sharex=True, sharey=True, squeeze=False)
+    grid = figure.subplots(rows, columns, sharex=shared, sharey=shared, squeeze=False)
     axes = list(grid.ravel())
     for spare in axes[count:]:
         spare.set_axis_off()
