@@ -280,7 +280,7 @@ def weighted_mean(
     weight = np.empty((width, most), dtype=np.float64)
     count = np.empty(width, dtype=np.int64)
     whole = np.empty(width, dtype=np.float64)
-    flat = values.reshape((values.shape[0], values.shape[1] * values.shape[2]))
+    flat = np.ascontiguousarray(values).reshape((values.shape[0], -1))
     for i in range(height):
         for j in range(width):
             count[j], whole[j] = 0, 0.0
