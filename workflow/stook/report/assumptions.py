@@ -112,6 +112,21 @@ def trend(assessment: Assessment) -> str:
     )
 
 
+def impact(assessment: Assessment) -> str:
+    """Return how the observed impact was worked out, in a few sentences."""
+    spec = assessment.trend
+    return (
+        "Yields under the observed weather against yields under the same weather without its "
+        "trends: every season index of every pixel has its least-squares trend over the period "
+        "taken out, its level in the first year kept, and the same responses are used for both "
+        "(method of Lobell, Schlenker & Costa-Roberts 2011). The impact is the trend of their "
+        "ratio over the period, in per cent of the yield without trends. Harvested area, "
+        "technology and all that is not in a response are held constant. The p-value is that of "
+        "the weather's trends, each weighted with what it did to yield, against "
+        f"{spec.randomisations} randomisations; level {spec.level:g}."
+    )
+
+
 def crop_inputs(assessment: Assessment) -> list[tuple[str, str, str, str, str]]:
     """Return crop, system, and where area, calendar and baseline yield come from."""
     rows = []

@@ -62,13 +62,15 @@ def change_maps(
     with drawing_settings():
         first = next(iter(chosen.values()))
         columns = len(scenarios)
-        height = min(4.6, (WIDTH - 1.9) / columns / _shape(first))
+        height = min(4.6, (WIDTH - 1.9) / columns / map_shape(first))
         figure = new_figure(0.75 + len(systems) * (height + 0.32))
         axes = figure.subplots(len(systems), columns, sharex=True, sharey=True, squeeze=False)
         for row, system in enumerate(systems):
             for column, scenario in enumerate(scenarios):
                 axis = axes[row, column]
-                _map(axis, chosen[system, scenario], norm, polygons)
+                one = chosen[system, scenario]
+                unsure = one["agreement"].values < AGREEMENT - 1e-9
+                draw_map(axis, one, "change_p50", unsure, norm, polygons)
                 axis.set_title(f"{crop}, {system} - {scenario}")
         bar = figure.colorbar(
             ScalarMappable(norm, diverging()), ax=axes, shrink=0.85, aspect=30, pad=0.02
@@ -76,7 +78,7 @@ def change_maps(
         bar.set_ticks(norm.boundaries.tolist())
         bar.set_label("median yield change, %")
         bar.outline.set_visible(False)
-        _legend(figure)
+        map_legend(figure, f"fewer than {percent(AGREEMENT)} of models agree on the sign")
     return Drawing(
         f"map_{crop}_{horizon}",
         f"Median yield change of {crop}, {horizon} against the baseline. Hatched: fewer than "
@@ -88,7 +90,7 @@ def change_maps(
     )
 
 
-def _shape(dataset: xr.Dataset) -> float:
+def map_shape(dataset: xr.Dataset) -> float:
     """Return width by height of the map, a degree of longitude shortened at the mid latitude."""
     lat, lon = _edges(dataset, "lat"), _edges(dataset, "lon")
     width = (lon[-1] - lon[0]) * np.cos(np.deg2rad((lat[0] + lat[-1]) / 2))
@@ -100,12 +102,20 @@ def _edges(dataset: xr.Dataset, name: str) -> np.ndarray:
     return np.append(bounds[:, 0], bounds[-1, 1])
 
 
-def _map(axis: Axes, dataset: xr.Dataset, norm: BoundaryNorm, polygons: gpd.GeoDataFrame) -> None:
+def draw_map(
+    axis: Axes,
+    dataset: xr.Dataset,
+    name: str,
+    unsure: np.ndarray,
+    norm: BoundaryNorm,
+    polygons: gpd.GeoDataFrame,
+) -> None:
+    """Draw one variable (lat, lon), hatched where it is unsure, with the outlines of regions."""
     lat, lon = _edges(dataset, "lat"), _edges(dataset, "lon")
     axis.set_facecolor(_NO_CROP)
-    change = np.ma.masked_invalid(dataset["change_p50"].values)
+    change = np.ma.masked_invalid(dataset[name].values)
     axis.pcolormesh(lon, lat, change, norm=norm, cmap=diverging(), rasterized=True)
-    unsure = ~change.mask & (dataset["agreement"].values < AGREEMENT - 1e-9)
+    unsure = ~change.mask & unsure
     if unsure.any():
         axis.add_patch(
             PathPatch(
@@ -153,14 +163,15 @@ def cells_outline(mask: np.ndarray, lat: np.ndarray, lon: np.ndarray) -> Outline
     return Outline(corners, codes)
 
 
-def _legend(figure: mpl.figure.Figure) -> None:
+def map_legend(figure: mpl.figure.Figure, hatched: str) -> None:
+    """Say what hatched and grey pixels are."""
     patches = [
         Patch(
             facecolor="white",
             edgecolor=INK,
             hatch="////",
             linewidth=0.4,
-            label=f"fewer than {percent(AGREEMENT)} of models agree on the sign",
+            label=hatched,
         ),
         Patch(facecolor=_NO_CROP, edgecolor=QUIET, linewidth=0.4, label="no crop or no value"),
     ]

@@ -10,6 +10,7 @@ from stook.report import sections
 from stook.report.page import Page, render
 from stook.report.publisher import Publisher
 from stook.report.reading import read_warnings
+from stook.report.sections_impact import add_impact
 from stook.report.source import Source, read_source
 from stook.version import VERSION
 
@@ -33,6 +34,7 @@ def page(assessment: Assessment) -> None:
     sections.add_years(source, content, publisher)
     sections.add_drivers(source, content, publisher)
     sections.add_trends(source, content, publisher)
+    add_impact(source, content, publisher)
     sections.add_correction(source, content, publisher)
     sections.add_assumptions(source, content)
     content.files = publisher.files

@@ -74,6 +74,9 @@ class Page:
     trends: list[Picture] = field(default_factory=list)
     trend_tables: list[Table] = field(default_factory=list)
     trend_text: str = ""
+    impacts: list[Picture] = field(default_factory=list)
+    impact_tables: list[Table] = field(default_factory=list)
+    impact_text: str = ""
     correction: list[Picture] = field(default_factory=list)
     correction_tables: list[Table] = field(default_factory=list)
     assumed: list[tuple[str, str]] = field(default_factory=list)

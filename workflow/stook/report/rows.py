@@ -230,6 +230,45 @@ def trend_summary_table(summary: pd.DataFrame, level: float) -> Table:
     )
 
 
+def impact_table(impacts: pd.DataFrame, test: str) -> Table:
+    """Return the impact of the observed trends of the weather by crop and region.
+
+    Parameters
+    ----------
+    impacts
+        Rows of the impact table.
+    test
+        Column of the p-value.
+    """
+    unit = mass_unit(impacts["recent_production_t"])
+    lost = impacts["recent_production_t"] - impacts["recent_detrended_t"]
+    rows = [
+        [
+            row["crop"],
+            row["period"],
+            row["region"],
+            signed(row["impact"]),
+            f"{signed(row['impact_p05'])} to {signed(row['impact_p95'])}",
+            f"{signed(row['chance_p05'])} to {signed(row['chance_p95'])}",
+            signed(row["lag1"], 2),
+            _p(row[test]),
+            f"{signed(row['recent_impact'])} ({signed(change / unit.tonnes)})",
+        ]
+        for change, (_, row) in zip(lost, impacts.iterrows(), strict=True)
+    ]
+    columns = [
+        *("Crop", "Period", "Region", "Impact over the period, %", "5-95 % of draws, %"),
+        *("Without a trend, 5-95 %, %", "Lag-1 correlation", "p"),
+        f"Production, last 10 years, % ({unit.name} a year)",
+    ]
+    return Table(
+        "Impact of the trends of the observed weather on yields, water systems together",
+        columns,
+        _merge_equal(rows, 2),
+        numbers=frozenset(range(3, 9)),
+    )
+
+
 def correction_table(evaluation: pd.DataFrame) -> Table:
     """Return the largest absolute statistic of any simulation before and after correction."""
     keys = ["variable", "statistic", "unit", "season"]
