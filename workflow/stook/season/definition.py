@@ -11,6 +11,9 @@ MeanVariable = Literal["tas", "tasmin", "tasmax", "diurnal-range", "pr", "rsds",
 SEASON = "season"
 """Name of the phase that is the whole growing season."""
 
+YEAR_ATTRIBUTES = {"long_name": "year of harvest"}
+"""Attributes of the coordinate `year` of seasons and yields."""
+
 
 class _Definition(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)

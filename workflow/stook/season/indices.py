@@ -15,6 +15,7 @@ from stook.grids.calendars import TimeStep
 from stook.grids.missing import Reason, reason_attributes
 from stook.season.definition import (
     SEASON,
+    YEAR_ATTRIBUTES,
     DaysAbove,
     DegreeDays,
     DrySpell,
@@ -176,7 +177,7 @@ def season_indices(
     }
     data["reason"] = results[-1].assign_attrs(reason_attributes())
     dataset = xr.Dataset(data).drop_vars(["time", "crop_system"], errors="ignore")
-    return dataset.assign_coords(year=("year", time.years, {"long_name": "year of harvest"}))
+    return dataset.assign_coords(year=("year", time.years, YEAR_ATTRIBUTES))
 
 
 def _block(*arrays: np.ndarray, time: SeriesTime, wanted: Wanted) -> tuple[np.ndarray, ...]:

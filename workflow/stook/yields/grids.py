@@ -8,6 +8,7 @@ import numpy as np
 import xarray as xr
 
 from stook.grids.missing import Reason, reason_attributes
+from stook.season.definition import YEAR_ATTRIBUTES
 from stook.yields.kernels import TERMS_AT_ONCE, padded, term_effects, yield_ratios
 from stook.yields.response import Response
 from stook.yields.response_terms import term_columns, term_slices
@@ -87,7 +88,8 @@ def yield_grids(
         for name, grid in zip(attributes, results[:-1], strict=True)
     }
     data["reason"] = results[-1].assign_attrs(reason_attributes())
-    return xr.Dataset(data).drop_vars("crop_system", errors="ignore")
+    dataset = xr.Dataset(data).drop_vars("crop_system", errors="ignore")
+    return dataset.assign_coords(year=("year", years, YEAR_ATTRIBUTES))
 
 
 def used_indices(response: Response) -> list[str]:

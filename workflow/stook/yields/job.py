@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from contextlib import ExitStack
+from pathlib import Path
 
 import numpy as np
 import xarray as xr
@@ -12,10 +13,12 @@ from stook.assessment.schema import Assessment
 from stook.assessment.variables import system_response
 from stook.audit.ledger import Job
 from stook.constants import CENTRAL_DRAW
+from stook.errors import ResultsError
 from stook.grids.analysis import AnalysisGrid, tile_count
 from stook.grids.files import open_result, pixel_chunks, read_table
 from stook.yields.coefficients import coefficient_draws
 from stook.yields.grids import yield_grids
+from stook.yields.response import Response
 
 _COPIES = 6
 """Arrays of 4 bytes a value that a block holds per index, year and pixel, about."""
@@ -57,15 +60,30 @@ def grid(assessment: Assessment, simulation: str, crop: str, system: str) -> Non
             xr.concat(parts, "lat", data_vars="minimal", join="exact") if parts[1:] else parts[0]
         )
         here = layers.sel(crop_system=f"{crop}_{system}")
-        draws = read_table(table).set_index("draw")
         grids = yield_grids(
             season,
             here["baseline_yield"],
             here["reason"],
             response,
-            draws.loc[CENTRAL_DRAW, response.coefficient_names].to_numpy(dtype=np.float64),
+            central_coefficients(table, response),
             assessment.periods.baseline,
         )
         grids = grids.assign_coords(AnalysisGrid.from_dataset(layers).coordinates())
         title = f"Yields of {crop}, {system}, {simulation}"
         job.netcdf(grids, layout.yields(simulation, crop, system), title)
+
+
+def central_coefficients(path: Path, response: Response) -> np.ndarray:
+    """Read the central coefficients of a response, float64 (k,), in document order.
+
+    Raises
+    ------
+    ResultsError
+        If the table is of another response.
+    """
+    draws = read_table(path).set_index("draw")
+    if missing := [name for name in response.coefficient_names if name not in draws]:
+        raise ResultsError(
+            f"{path}: lacks {', '.join(missing)} of the response; delete it and run again"
+        )
+    return draws.loc[CENTRAL_DRAW, response.coefficient_names].to_numpy(dtype=np.float64)
