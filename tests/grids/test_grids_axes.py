@@ -85,6 +85,12 @@ def test_float32_axes_have_the_tolerance_of_their_digits() -> None:
     lon_single, lon_double = source_axes(single, "a.nc")[1], source_axes(double, "a.nc")[1]
     assert lon_double.tolerance < 1e-6 < lon_single.tolerance < 1e-4
     assert lon_single.same(lon_double)
+    bounds = np.stack([exact - 1 / 24, exact + 1 / 24], axis=1).astype(np.float32)
+    double["longitude_bnds"] = (("longitude", "bnds"), bounds)
+    double["longitude"].attrs["bounds"] = "longitude_bnds"
+    lon_bounded = source_axes(double, "a.nc")[1]
+    assert lon_bounded.tolerance == lon_single.tolerance
+    assert lon_bounded.same(lon_double)
 
 
 def test_same_cells() -> None:

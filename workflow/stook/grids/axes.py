@@ -135,7 +135,8 @@ def _axis(
             f"{path}: {axis.name} goes more than once round the globe; drop the repeated columns"
         )
     tolerance = made.tolerance
-    if axis.dtype.itemsize < 8:
+    bounds = dataset.variables.get(str(axis.attrs.get("bounds", "")), axis)
+    if min(axis.dtype.itemsize, bounds.dtype.itemsize) < 8:
         largest = np.float32(np.abs(axis.values).max())
         tolerance = max(tolerance, 2 * float(np.spacing(largest)))
     return SourceAxis(centres, edges, descending, made.cyclic, tolerance)

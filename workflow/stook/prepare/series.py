@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from itertools import pairwise
 from pathlib import Path
 
@@ -115,12 +116,12 @@ class Series:
         """The calendar, by Stook's one name for it."""
         return str(self.times[0].calendar)
 
-    @property
+    @cached_property
     def years(self) -> np.ndarray:
         """Year of each step, int64, shape (time,)."""
         return years_of(self.times)
 
-    @property
+    @cached_property
     def numbers(self) -> np.ndarray:
         """Consecutive number of each step (days, months or years), int64, shape (time,)."""
         return step_number(self.times, self.step)
