@@ -40,7 +40,8 @@ def simulation(model: str = "ALDER-ESM", scenario: str = "high", realisation: st
 
 def series(production: np.ndarray, years: np.ndarray = YEARS, area: float = 1000.0) -> SystemSeries:
     """Return the totals of (draw, region, year) production."""
-    regions = list(REGIONS[: production.shape[1]])
+    count = production.shape[1]
+    regions = [*REGIONS[:count], *(f"District {number}" for number in range(4, count + 1))]
     areas = np.full(len(regions), area)
     flags = np.zeros(production.shape[1:])
     return SystemSeries(regions, years, production, areas, np.zeros(len(regions)), flags)

@@ -11,6 +11,7 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 import pandas as pd
+from numba import njit
 
 from stook.constants import OUTSIDE
 from stook.ensemble.kernels import SHARE_OF_YEARS, simulation_weights
@@ -32,8 +33,9 @@ JOINT = {
 """Columns of the table; `of` is regions or crops, `units` how many, shares of years 0 to 1."""
 
 
+@njit(cache=True, nogil=True)
 def at_least(shares: np.ndarray) -> np.ndarray:
-    """Return the probability of at least k independent events, k = 0 to n.
+    """Return the probability of at least k independent events (kernel): (n) -> (n + 1).
 
     Parameters
     ----------
@@ -45,13 +47,18 @@ def at_least(shares: np.ndarray) -> np.ndarray:
     >>> at_least(np.array([0.5, 0.5]))
     array([1.  , 0.75, 0.25])
     """
-    exactly = np.array([1.0])
-    for share in shares:
-        grown = np.zeros(exactly.size + 1)
-        grown[:-1] += exactly * (1.0 - share)
-        grown[1:] += exactly * share
-        exactly = grown
-    return np.minimum(np.cumsum(exactly[::-1])[::-1], 1.0)
+    exactly = np.zeros(shares.size + 1)
+    exactly[0] = 1.0
+    for number in range(shares.size):
+        share = shares[number]
+        for k in range(number + 1, 0, -1):
+            exactly[k] = exactly[k] * (1.0 - share) + exactly[k - 1] * share
+        exactly[0] *= 1.0 - share
+    total = 0.0
+    for k in range(shares.size, -1, -1):
+        total += exactly[k]
+        exactly[k] = min(total, 1.0)
+    return exactly
 
 
 def joint_shares(flags: np.ndarray) -> tuple[np.ndarray, np.ndarray, int]:
@@ -75,7 +82,7 @@ def joint_shares(flags: np.ndarray) -> tuple[np.ndarray, np.ndarray, int]:
         return np.full(len(flags) + 1, np.nan), np.full(len(flags) + 1, np.nan), 0
     short = flags[:, known] == 1
     number = short.sum(axis=0)
-    observed = np.array([(number >= k).mean() for k in range(len(flags) + 1)])
+    observed = np.bincount(number, minlength=len(flags) + 1)[::-1].cumsum()[::-1] / years
     return observed, at_least(short.mean(axis=1)), years
 
 

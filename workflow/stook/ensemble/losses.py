@@ -88,10 +88,10 @@ def region_losses(
     ]
     rows: list[dict[str, object]] = []
     for horizon in horizons:
-        have = [number for number, run in enumerate(runs) if horizon in run.changes]
+        have = [number for number, run in enumerate(runs) if horizon in run.windows]
         if not have or not units:
             continue
-        change = np.stack([members_of(runs[n].changes[horizon].change)[0][:, units] for n in have])
+        change = np.stack([members_of(runs[n].change(horizon).T[None])[0][:, units] for n in have])
         there = np.isfinite(change).all(axis=(1, 2))
         if not there.any():
             continue

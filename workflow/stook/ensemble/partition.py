@@ -250,8 +250,9 @@ def _crossed(
     """
     leads, _, draws = paths.shape
     result = np.full((leads, 4), np.nan)
-    for lead in range(leads):
-        there = np.isfinite(paths[lead, :, 0])
+    known = np.isfinite(paths[:, :, 0])
+    for there in np.unique(known, axis=0):
+        chosen = np.flatnonzero((known == there).all(axis=1))
         present = np.unique(scenario[there])
         complete = [
             m for m in np.unique(model[there])
@@ -259,15 +260,15 @@ def _crossed(
         ]  # fmt: skip
         if len(complete) < 2:
             continue
-        cells = np.empty((1, len(complete), present.size, draws))
-        rough = 0.0
+        cells = np.empty((chosen.size, len(complete), present.size, draws))
+        rough = np.zeros(chosen.size)
         for i, m in enumerate(complete):
             for j, s in enumerate(present):
                 own = np.flatnonzero(there & (model == m) & (scenario == s))
-                cells[0, i, j] = paths[lead, own].mean(axis=0)
-                rough += float(noise[lead, own].sum()) / own.size**2
+                cells[:, i, j] = paths[chosen][:, own].mean(axis=1)
+                rough += noise[chosen][:, own].sum(axis=1) / own.size**2
         rough /= len(complete) * present.size
-        result[lead] = crossed_variances(cells, np.array([rough]))[0]
+        result[chosen] = crossed_variances(cells, rough)
     return result if np.isfinite(result).any() else None
 
 

@@ -176,7 +176,7 @@ def _combined(assessment: Assessment, crop: str) -> str:
 def _light(run: RunSummary) -> RunSummary:
     """Return a summary without what only the tables of its own crop need."""
     none = np.empty((len(run.regions), 0, 0))
-    return replace(run, paths=none, steps=none, short=none, changes={})
+    return replace(run, paths=none, steps=none, short=none)
 
 
 def _level_changes(runs: Sequence[RunSummary], models: Models, level: str) -> pd.DataFrame:
@@ -186,16 +186,17 @@ def _level_changes(runs: Sequence[RunSummary], models: Models, level: str) -> pd
     """
     first = runs[0]
     kept = [number for number, name in enumerate(first.regions) if name != TOTAL]
-    draws = first.paths.shape[2]
-    empty = np.full((1, len(first.regions)), np.nan)
-    never = Changes(np.full((1, draws, len(first.regions)), np.nan), empty, empty, empty)
-    found = [run.changes.get(level, never) for run in runs]
-    changes = Changes(
-        *(
-            np.concatenate([getattr(one, name)[..., kept] for one in found])
-            for name in ("change", "baseline", "horizon", "extrapolated")
-        )
-    )
+    draws = first.production.shape[2]
+    change = np.full((len(runs), draws, len(kept)), np.nan)
+    before, after, flagged = (np.full((len(runs), len(kept)), np.nan) for _ in range(3))
+    for number, run in enumerate(runs):
+        if level not in run.windows:
+            continue
+        place = run.periods.index(level)
+        change[number] = run.change(level)[kept].T
+        before[number], after[number] = run.production[kept, 0, 0], run.production[kept, place, 0]
+        flagged[number] = run.extrapolated[kept, place]
+    changes = Changes(change, before, after, flagged)
     regions = [first.regions[number] for number in kept]
     years, made = np.empty(0, np.int64), np.empty((0, len(kept), 0))
     series = [

@@ -168,7 +168,7 @@ def robustness_table(
         for number, run in enumerate(runs):
             if horizon not in run.windows:
                 continue
-            change[:, number] = run.changes[horizon].change[0, CENTRAL_DRAW]
+            change[:, number] = run.change(horizon)[:, CENTRAL_DRAW]
             years = [b - a + 1 for a, b in (run.windows[run.periods[0]], run.windows[horizon])]
             threshold[:, number] = variability_threshold(run.baseline_deviation, *years)
         signal, shares, counts = classify(change, threshold, models.number, models.weight.size)

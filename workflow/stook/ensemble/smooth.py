@@ -74,30 +74,46 @@ def fit(values: np.ndarray, basis: np.ndarray, kept: np.ndarray) -> tuple[np.nda
 
 @njit(cache=True, nogil=True)
 def running_variance(
-    values: np.ndarray, paths: np.ndarray, years: np.ndarray, kept: np.ndarray, length: int
+    values: np.ndarray,
+    paths: np.ndarray,
+    basis: np.ndarray,
+    years: np.ndarray,
+    kept: np.ndarray,
+    length: int,
 ) -> np.ndarray:
     """Return the variance of running means of the residuals (kernel): (series, year) -> (series).
 
     Means are taken over `length` consecutive kept years, their variance about zero; NaN without
-    such a run of years. The variance is scaled by n / (n - ORDER - 1) for the degrees of freedom
-    the path took, exact for single years of white noise.
+    such a run of years. The path takes a part of the variance with it; what is left is scaled up
+    by that part, exactly for white noise: by ``(1/L) / mean(1/L - |mean of the basis|^2)``, which
+    is n / (n - ORDER - 1) for single years.
     """
     place = np.flatnonzero(kept)
+    starts = np.empty(place.size, np.int64)
+    windows, left = 0, 0.0
+    for start in range(place.size - length + 1):
+        if years[place[start + length - 1]] - years[place[start]] == length - 1:
+            starts[windows] = start
+            windows += 1
+            left += 1.0 / length
+            for k in range(basis.shape[1]):
+                mean = 0.0
+                for year in place[start : start + length]:
+                    mean += basis[year, k]
+                left -= (mean / length) ** 2
     result = np.full(values.shape[0], np.nan)
-    freedom = place.size - (ORDER + 1)
+    if windows == 0 or left <= 1e-9:
+        return result
+    scale = 1.0 / length / left
     for series in range(values.shape[0]):
-        total, windows = 0.0, 0
-        for start in range(place.size - length + 1):
-            if years[place[start + length - 1]] - years[place[start]] != length - 1:
-                continue
+        total = 0.0
+        for start in starts[:windows]:
             mean = 0.0
             for year in place[start : start + length]:
                 mean += values[series, year] - paths[series, year]
             mean /= length
             total += mean * mean
-            windows += 1
-        if windows > 0 and freedom > 0:
-            result[series] = total / windows * place.size / freedom
+        result[series] = total * scale
     return result
 
 

@@ -16,7 +16,6 @@ import pandas as pd
 from stook.assessment.simulations import Simulation
 from stook.constants import OUTSIDE
 from stook.ensemble import smooth
-from stook.ensemble.changes import Changes, changes_of
 from stook.ensemble.kernels import SHARE_OF_YEARS, period_means, simulation_weights
 from stook.ensemble.series import Models, SystemSeries
 from stook.ensemble.short_years import REFERENCES, short_counts, short_years
@@ -99,8 +98,8 @@ class RunSummary:
         1 a shortfall of the central estimate, 0 none, -1 unknown, (region, reference, year).
     windows
         First and last year of each period.
-    changes
-        By horizon, as `changes_of` gives them for one simulation.
+    extrapolated
+        Mean share of the area outside an estimation range by period, (region, period).
     """
 
     simulation: Simulation
@@ -125,7 +124,14 @@ class RunSummary:
     worst: np.ndarray
     flags: np.ndarray
     windows: Mapping[str, Years]
-    changes: Mapping[str, Changes]
+    extrapolated: np.ndarray
+
+    def change(self, horizon: str) -> np.ndarray:
+        """Return the change of mean yield against the baseline, per cent, (region, draw)."""
+        base, later = self.production[:, 0], self.production[:, self.periods.index(horizon)]
+        ratio = np.full(base.shape, np.nan)
+        np.divide(later, base, out=ratio, where=base > 0)
+        return 100.0 * (ratio - 1.0)
 
     def grown(self) -> list[tuple[int, str]]:
         """Return number and name of the regions with harvested area, with a yield or without."""
@@ -228,7 +234,13 @@ def summarise(
             settings.shortfall / 100,
         ),
         own,
-        {name: changes_of([series], settings.baseline, period) for name, period in windows.items()},
+        np.stack(
+            [
+                _period_mean(series.extrapolated[:, None], years, period)[:, 0]
+                for period in own.values()
+            ],
+            axis=1,
+        ),
     )
 
 
@@ -263,7 +275,7 @@ class _Fitted:
             basis = smooth.polynomial_basis(years, kept)
             flat = values[chosen].reshape(chosen.size * draws, -1)
             fitted, squares = smooth.fit(flat, basis, kept)
-            spread = smooth.running_variance(flat, fitted, years, kept, settings.mean_years)
+            spread = smooth.running_variance(flat, fitted, basis, years, kept, settings.mean_years)
             paths[chosen] = fitted.reshape(chosen.size, draws, -1)
             variance[chosen] = spread.reshape(chosen.size, draws)
             freedom = kept.sum() - (smooth.ORDER + 1)
@@ -302,8 +314,10 @@ def _places(years: np.ndarray, wanted: np.ndarray) -> np.ndarray:
 
 def _period_mean(values: np.ndarray, years: np.ndarray, period: Years) -> np.ndarray:
     """Average over a period: (region, draw, year) -> (region, draw)."""
-    inside = (years >= period[0]) & (years <= period[1])
-    flat = np.ascontiguousarray(values.reshape(-1, years.size))
+    chosen = slice(*np.searchsorted(years, (period[0], period[1] + 1)))
+    rows = int(np.prod(values.shape[:-1]))
+    flat = np.ascontiguousarray(values[..., chosen]).reshape(rows, chosen.stop - chosen.start)
+    inside = np.ones(flat.shape[1], dtype=bool)
     return period_means(flat, inside, period[1] - period[0] + 1).reshape(values.shape[:-1])
 
 
