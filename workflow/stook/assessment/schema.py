@@ -42,9 +42,9 @@ class Section(BaseModel):
 class Axis(Section):
     """Pixel centres from first to last, evenly spaced, degrees."""
 
-    first: float
-    last: float
-    step: float = Field(gt=0)
+    first: float = Field(description="centre of the first pixel")
+    last: float = Field(description="centre of the last pixel, a whole number of steps further")
+    step: float = Field(gt=0, description="size of a pixel")
 
     @model_validator(mode="after")
     def _whole_steps(self) -> Axis:
@@ -57,8 +57,8 @@ class Axis(Section):
 class Grid(Section):
     """The analysis grid: axes, or the grid of a file."""
 
-    lat: Axis | None = None
-    lon: Axis | None = None
+    lat: Axis | None = Field(None, description="latitudes, southern first")
+    lon: Axis | None = Field(None, description="longitudes within -180 to 180, western first")
     like: Path | None = Field(None, description="NetCDF file whose latitude and longitude to use")
     tiles: int = Field(
         1, ge=1, le=1000, description="bands of rows the heavy stages are split into"
@@ -74,8 +74,10 @@ class Grid(Section):
 class Periods(Section):
     """Calendar windows, first and last year included."""
 
-    baseline: Years
-    horizons: dict[Name, Years] = Field(default_factory=dict)
+    baseline: Years = Field(description="what changes are measured against")
+    horizons: dict[Name, Years] = Field(
+        default_factory=dict, description="future periods by name; without any, no change is stated"
+    )
     span: Years | None = Field(None, description="years to compute; default: all in the files")
 
 
@@ -86,17 +88,19 @@ Files = dict[Variable, list[str]]
 class Reference(Section):
     """The reference data the correction is calibrated on, and the pseudo-simulation observed."""
 
-    name: str
-    files: Files = Field(min_length=1)
+    name: str = Field(description="name of the record, as the report shows it")
+    files: Files = Field(min_length=1, description="by variable: files or patterns (`*`, `?`)")
 
 
 class Run(Section):
     """One simulation with explicit files, historical and scenario part together."""
 
-    model: Name
-    scenario: Name
-    realisation: Name
-    files: Files = Field(min_length=1)
+    model: Name = Field(description="name of the climate model")
+    scenario: Name = Field(description="name of the scenario")
+    realisation: Name = Field(description="name of the realisation, such as r1")
+    files: Files = Field(
+        min_length=1, description="by variable: all files of the series, the historical ones too"
+    )
 
 
 class Simulations(Section):
@@ -106,13 +110,18 @@ class Simulations(Section):
     parts may use ``*``.
     """
 
-    pattern: str | None = None
+    pattern: str | None = Field(
+        None,
+        description="such as climate/{model}/{variable}_day_{model}_{scenario}_{realisation}_*.nc",
+    )
     historical: Name | None = Field(
         None, description="scenario name of the historical part, joined before every scenario"
     )
     models: list[Name] | None = Field(None, description="keep these models only")
     scenarios: list[Name] | None = Field(None, description="keep these scenarios only")
-    runs: list[Run] = Field(default_factory=list)
+    runs: list[Run] = Field(
+        default_factory=list, description="instead of a pattern: explicit files"
+    )
 
     @model_validator(mode="after")
     def _one_way(self) -> Simulations:
@@ -131,16 +140,16 @@ Method = Literal["quantile-delta", "quantile", "mean", "none"]
 class VariableCorrection(Section):
     """Choices of the correction of one variable; those left out come from `correct.all`."""
 
-    method: Method = "quantile-delta"
+    method: Method = Field("quantile-delta", description="see docs/correct.md")
     kind: Literal["additive", "ratio"] | None = Field(
         None, description="default: ratio for pr, additive otherwise"
     )
-    window_days: int = Field(31, ge=1, le=365)
-    step_days: int = Field(5, ge=1, le=31)
+    window_days: int = Field(31, ge=1, le=365, description="days of the moving window")
+    step_days: int = Field(5, ge=1, le=31, description="days between the centres of windows")
     cdf_years: int = Field(30, ge=5, description="years of the moving CDF of quantile-delta")
-    cdf_step_years: int = Field(10, ge=1)
+    cdf_step_years: int = Field(10, ge=1, description="years by which that CDF moves on")
     nodes: int | Literal["all"] = Field("all", description="quantiles kept of each calibration CDF")
-    ratio_cap: float = Field(10.0, gt=1)
+    ratio_cap: float = Field(10.0, gt=1, description="largest factor of a ratio correction")
     trace: float = Field(0.05, gt=0, description="pr: below this a day is dry, mm/day")
     minimum_values: int = Field(100, ge=10, description="values a window needs")
 
@@ -149,9 +158,13 @@ class Correct(Section):
     """The correct stage."""
 
     calibration: Years | None = Field(None, description="default: the baseline")
-    temperature_pair: Literal["mean-and-range", "separate"] = "mean-and-range"
-    all: VariableCorrection = VariableCorrection()
-    variables: dict[Variable, dict[str, Any]] = Field(default_factory=dict)
+    temperature_pair: Literal["mean-and-range", "separate"] = Field(
+        "mean-and-range", description="tasmin and tasmax as mean and range, or each by itself"
+    )
+    all: VariableCorrection = Field(VariableCorrection(), description="choices for all variables")
+    variables: dict[Variable, dict[str, Any]] = Field(
+        default_factory=dict, description="by variable: keys of `all` that differ"
+    )
 
     @model_validator(mode="after")
     def _valid_overrides(self) -> Correct:
@@ -172,7 +185,7 @@ class Correct(Section):
 class Layer(Section):
     """A grid of one crop property: a variable of a NetCDF file, a GeoTIFF band, or one number."""
 
-    file: Path | None = None
+    file: Path | None = Field(None, description="NetCDF, or GeoTIFF (.tif, .tiff)")
     variable: str | None = Field(None, description="NetCDF variable; needed if there are several")
     band: int = Field(1, ge=1, description="GeoTIFF band")
     value: float | None = Field(None, description="the same number everywhere")
@@ -199,20 +212,20 @@ class Layer(Section):
 class CropCalendar(Section):
     """Planting and maturity as day of year (1 to 365); maturity before planting: next year."""
 
-    planting: Layer
-    maturity: Layer
+    planting: Layer = Field(description="day of year of planting or sowing")
+    maturity: Layer = Field(description="day of year of maturity or harvest")
 
 
 class WaterSystem(Section):
     """One crop under one water supply (rainfed, irrigated, or the team's own name)."""
 
     area: Layer = Field(description="harvested area: ha, km2 or a fraction of the cell")
-    calendar: CropCalendar
+    calendar: CropCalendar = Field(description="growing season")
     phases: dict[Name, tuple[float, float]] = Field(
         default_factory=dict, description="growth phases as fractions of the season, 0 to 1"
     )
     baseline_yield: Layer = Field(description="t/ha or a convertible unit")
-    response: Path
+    response: Path = Field(description="response document, see below")
     indices: dict[str, IndexDefinition] = Field(
         default_factory=dict, description="indices wanted besides those of the response"
     )
@@ -230,7 +243,7 @@ class WaterSystem(Section):
 class Crop(Section):
     """One crop with its water systems."""
 
-    systems: dict[Name, WaterSystem] = Field(min_length=1)
+    systems: dict[Name, WaterSystem] = Field(min_length=1, description="by name of the system")
 
     @model_validator(mode="after")
     def _reserved(self) -> Crop:
@@ -242,8 +255,8 @@ class Crop(Section):
 class Regions(Section):
     """The region polygons."""
 
-    file: Path
-    layer: str | None = None
+    file: Path = Field(description="GeoPackage, GeoJSON or shapefile")
+    layer: str | None = Field(None, description="layer of the file; needed if there are several")
     name: str = Field("name", description="attribute that holds the region's name")
     only: list[str] | None = Field(None, description="keep these regions of the file only")
 
@@ -323,9 +336,9 @@ class Trend(Section):
     method: Literal["ar1", "shuffle", "blocks", "phases"] = Field(
         "ar1", description="test that headlines are drawn from"
     )
-    randomisations: int = Field(999, ge=99, le=100000)
-    level: float = Field(0.05, gt=0, lt=0.5)
-    minimum_years: int = Field(20, ge=10)
+    randomisations: int = Field(999, ge=99, le=100000, description="randomised series per test")
+    level: float = Field(0.05, gt=0, lt=0.5, description="level of significance")
+    minimum_years: int = Field(20, ge=10, description="years a trend needs")
 
 
 class Store(Section):
@@ -340,21 +353,23 @@ class Store(Section):
 class Assessment(Section):
     """A whole assessment, validated. `folder` is where its file lies; paths are relative to it."""
 
-    title: str
-    name: Name
-    seed: int = Field(ge=0)
-    results: Path = Path("results")
-    grid: Grid
-    periods: Periods
-    reference: Reference | None = None
-    simulations: Simulations = Simulations()
-    correct: Correct = Correct()
-    crops: dict[Name, Crop] = Field(min_length=1)
-    regions: Regions
-    ensemble: Ensemble = Ensemble()
-    supply: Supply = Supply()
-    trend: Trend = Trend()
-    store: Store = Store()
+    title: str = Field(description="one line that says what is assessed")
+    name: Name = Field(description="name of the folder under `results`")
+    seed: int = Field(ge=0, description="seed of everything random")
+    results: Path = Field(Path("results"), description="folder of all results")
+    grid: Grid = Field(description="the grid every result lies on")
+    periods: Periods = Field(description="baseline and horizons")
+    reference: Reference | None = Field(
+        None, description="the observed record; needed unless nothing is corrected"
+    )
+    simulations: Simulations = Field(Simulations(), description="the climate models' output")
+    correct: Correct = Field(Correct(), description="how simulations are corrected")
+    crops: dict[Name, Crop] = Field(min_length=1, description="by name of the crop")
+    regions: Regions = Field(description="where totals are taken")
+    ensemble: Ensemble = Field(Ensemble(), description="how members are put together")
+    supply: Supply = Field(Supply(), description="from production to people supplied")
+    trend: Trend = Field(Trend(), description="how trends are tested")
+    store: Store = Field(Store(), description="how grids are written")
     subset: list[str] = Field(
         default_factory=list, description="set by --region: compute these regions only"
     )

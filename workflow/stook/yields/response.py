@@ -71,22 +71,26 @@ class Response(_Strict):
     squares of `standard_errors`) is the covariance matrix of that vector.
     """
 
-    crop: str
-    system: str
+    crop: str = Field(description="crop it was estimated for")
+    system: str = Field(description="water system it was estimated for")
     link: Literal["log", "level"] = Field(
         description="log: terms add up to log yield; level: terms (plus intercept) are yield, t/ha"
     )
     intercept: float = Field(0.0, description="needed for a level link; cancels for a log link")
-    indices: dict[str, IndexDefinition] = Field(min_length=1)
-    terms: dict[str, Term] = Field(min_length=1)
-    covariance: tuple[tuple[float, ...], ...] | None = None
+    indices: dict[str, IndexDefinition] = Field(
+        min_length=1, description="by name: the weather indices that terms use"
+    )
+    terms: dict[str, Term] = Field(min_length=1, description="by name: what adds up to the yield")
+    covariance: tuple[tuple[float, ...], ...] | None = Field(
+        None, description="of all coefficients in the order of the document, a row each"
+    )
     standard_errors: tuple[float, ...] | None = Field(
         None, description="used when no covariance is known; coefficients are then independent"
     )
     estimation_range: dict[str, tuple[float, float]] = Field(
         description="lowest and highest value of each index in the data it was estimated from"
     )
-    citation: str
+    citation: str = Field(description="where the response is published")
     note: str = Field(description="where the numbers come from")
 
     @model_validator(mode="after")
