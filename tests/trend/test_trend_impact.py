@@ -21,9 +21,10 @@ from stook.assessment.schema import Assessment
 from stook.audit.plain.impact import impact_of, pixel_impact
 from stook.audit.plain.trend import trend_of_series
 from stook.grids.missing import Reason
+from stook.regions.totals import SystemGrids
 from stook.trend import job
 from stook.trend.detrend import detrend, impact_series, lowest_value
-from stook.trend.impact import COLUMNS
+from stook.trend.impact import COLUMNS, Setting, impact_table, spread, system_impact
 from stook.trend.impact_kernels import impact_percent, logarithmic_mean, ratio_trends
 from stook.trend.series import TrendOptions
 from stook.yields.response import Response
@@ -317,3 +318,45 @@ def test_level_of_the_test() -> None:
     # The ratio of the two yields is nearly a straight line: testing it would be no test.
     assert found["naive_level"] > 0.4
     assert found["slope_error"] < 0.1
+
+
+@pytest.mark.heavy
+def test_tables_of_the_docs_are_those_of_the_command() -> None:
+    command = [sys.executable, str(TESTS / "validation" / "impact_level.py")]
+    done = subprocess.run(command, check=True, capture_output=True, text=True)
+    rows = [line for line in done.stdout.splitlines() if line.startswith("|")]
+    assert len(rows) == 2 + 9 + 2 + 9
+    documented = (TESTS.parent / "docs" / "trend.md").read_text(encoding="utf-8").splitlines()
+    assert [row for row in rows if row not in documented] == []
+
+
+def test_region_with_too_few_complete_years_has_no_impact() -> None:
+    # Every pixel lacks two years of its own: none is left out, but the region lacks eight of 30.
+    years = np.arange(1981, 2011)
+    heat = np.random.default_rng(2).uniform(30, 60, (30, 1, 4))
+    for pixel in range(4):
+        heat[[3 + 5 * pixel, 5 + 5 * pixel], 0, pixel] = np.nan
+    here = {"year": years, "lat": [45.0], "lon": np.arange(4.0)}
+    maps = ("lat", "lon")
+    season = xr.Dataset({"heat": (("year", *maps), heat)}, here)
+    layer = xr.Dataset({name: (maps, np.full((1, 4), 5.0)) for name in ("area", "baseline_yield")})
+    reason = xr.Dataset({"reason": (maps, np.zeros((1, 4), dtype=np.int8))})
+    overlay = xr.Dataset(
+        {"coverage": (("region", *maps), np.ones((1, 1, 4)))}, {"region": ["Saltmere"]}
+    )
+    setting = Setting(linear(-0.004), np.array([[-0.004], [-0.003]]), (1981, 2010), OPTIONS, 64)
+    sums = system_impact(SystemGrids(season, reason, layer), overlay, setting, (1981, 2010))
+    row = impact_table("maize", {"rainfed": sums}, "all", OPTIONS).iloc[0]
+    assert row["years"] == 0
+    assert np.isnan(row[["impact", "impact_p50", "chance_p05", "p_ar1"]].astype(float)).all()
+    assert row["area_ha"] == 20.0
+
+
+def test_without_draws_there_is_no_spread() -> None:
+    found = spread(np.array([[3.0, -1.0]]))
+    np.testing.assert_array_equal(found["impact"], [3.0, -1.0])
+    assert np.isnan(found.drop(columns="impact").to_numpy()).all()
+    draws = spread(np.array([[3.0, -1.0], [1.0, np.nan], [-2.0, 0.0], [4.0, 1.0]]))
+    assert draws["impact_p50"].iloc[0] == 1.0
+    assert draws["share_decrease"].iloc[0] == 1 / 3
+    assert np.isnan(draws["impact_p50"].iloc[1])  # a draw is missing
