@@ -118,7 +118,8 @@ def test_duration(seconds, words):
     [
         ("python -m stook.job\nerror: x.nc: is broken\n\n", "x.nc: is broken"),
         ("Traceback\n  File\nValueError: 3\n", "ValueError: 3"),
-        ("", "the job ended without a word"),
+        ("python -m stook.job season tile\n", "the job was ended before it was done"),
+        ("", "the job was ended before it was done"),
     ],
 )
 def test_last_error(tmp_path, text, cause):

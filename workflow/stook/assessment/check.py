@@ -15,6 +15,7 @@ from stook.assessment.requirements import (
     NeededPixels,
     response_problems,
     series_problems,
+    table_problems,
     weight_problems,
 )
 from stook.assessment.schema import Assessment
@@ -75,6 +76,7 @@ def check(assessment: Assessment, progress: Progress | None = None) -> Check:
     found = _simulations(assessment, problems)
     problems += response_problems(assessment, found)
     problems += weight_problems(assessment, found)
+    problems += table_problems(assessment, found)
     systems: list[SystemFacts] = []
     pixels = None
     try:

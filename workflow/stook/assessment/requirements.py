@@ -12,6 +12,8 @@ from stook.assessment.schema import Assessment
 from stook.assessment.simulations import Simulation
 from stook.assessment.variables import series_variables, sources, system_indices, system_response
 from stook.constants import OBSERVED
+from stook.ensemble.horizons import level_windows
+from stook.ensemble.supply import read_population
 from stook.errors import Problem, StookError
 from stook.grids.analysis import AnalysisGrid
 from stook.season.definition import (
@@ -237,6 +239,22 @@ def weight_problems(assessment: Assessment, found: Sequence[Simulation]) -> list
     if unknown := sorted(set(weights) - models):
         message = f"{_listed(unknown)} is no model; models are {_listed(sorted(models))}"
         problems.append(Problem("error", where, message))
+    return problems
+
+
+def table_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:
+    """Return what is wrong with the tables of global means and of population, if there are any."""
+    problems: list[Problem] = []
+    population = assessment.supply.population
+    try:
+        level_windows(assessment, [s for s in found if s.name != OBSERVED])
+    except StookError as error:
+        problems += as_problems(error)
+    try:
+        if population is not None:
+            read_population(assessment.path(population))
+    except StookError as error:
+        problems += as_problems(error)
     return problems
 
 

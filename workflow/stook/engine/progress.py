@@ -14,6 +14,9 @@ from rich.progress import BarColumn, Progress, TaskID, TextColumn
 
 from stook.assessment.layout import STAGES
 
+COMMAND = "python -m stook.job "
+"""How the line begins that a job writes first into its log."""
+
 
 @dataclass
 class Failure:
@@ -202,13 +205,14 @@ def last_error(log: Path) -> str:
     """Return the cause of a failure from a job's log: its last line that says something.
 
     A user's mistake is logged as ``error: ...``; of a traceback the last line names the exception.
+    The first line of a log is the command, and no cause.
     """
     try:
         lines = log.read_text(encoding="utf-8", errors="replace").splitlines()
     except OSError:
         return "no log was written"
-    told = [line.strip() for line in lines if line.strip()]
+    told = [line.strip() for line in lines if line.strip() and not line.startswith(COMMAND)]
     marked = [line for line in told if line.startswith("error: ")]
     if marked:
         return marked[-1].removeprefix("error: ")
-    return told[-1] if told else "the job ended without a word"
+    return told[-1] if told else "the job was ended before it was done"
