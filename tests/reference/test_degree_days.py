@@ -32,8 +32,8 @@ def degree_days(low: np.ndarray, high: np.ndarray, base: float, cap: float | Non
     """Return the sum over all days given, by the kernel."""
     series = low[:, None].astype(np.float64), high[:, None].astype(np.float64)
     first, end = np.array([[0]]), np.array([[len(low)]])
-    above = season_degree_days(*series, first, end, float(base))[0, 0]
-    return above - (0 if cap is None else season_degree_days(*series, first, end, float(cap))[0, 0])
+    top = np.inf if cap is None else float(cap)
+    return season_degree_days(*series, first, end, float(base), top)[0, 0]
 
 
 @pytest.mark.parametrize(("low", "high", "base", "cap", "expected"), TABLE)

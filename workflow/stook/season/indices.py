@@ -267,8 +267,8 @@ def _daily_sums(
     match definition:
         case DegreeDays(base=base, cap=cap):
             pair = series["tasmin"], series["tasmax"]
-            above = season_degree_days(*pair, first, end, base)
-            return above if cap is None else above - season_degree_days(*pair, first, end, cap)
+            top = np.inf if cap is None else cap
+            return season_degree_days(*pair, first, end, base, top)
         case DaysAbove(variable=variable, threshold=threshold):
             own = series.get(variable)
             pair = (own, own) if own is not None else (series["tasmin"], series["tasmax"])

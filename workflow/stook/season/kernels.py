@@ -37,42 +37,52 @@ def season_sums(
 
 @njit(cache=True, nogil=True)
 def season_degree_days(
-    low: np.ndarray, high: np.ndarray, first: np.ndarray, end: np.ndarray, threshold: float
+    low: np.ndarray,
+    high: np.ndarray,
+    first: np.ndarray,
+    end: np.ndarray,
+    base: float,
+    cap: float,
 ) -> np.ndarray:  # pragma: no cover - compiled
-    """Return degree days above a threshold summed over every season, float64 (year, pixel).
+    """Return degree days above a base and below a cap summed over every season.
 
-    `low` and `high` are tasmin and tasmax, degC. Where both lie on one side of the threshold, the
-    day counts nothing or its mean less the threshold. The other days are collected, and their
-    sines (`stook.season.sine`) worked out together.
+    `low` and `high` are tasmin and tasmax, degC; a cap of infinity is no cap. Where both lie on one
+    side of a threshold, the day counts nothing or its mean less the threshold. The other days are
+    collected, and their sines (`stook.season.sine`) worked out together. Returns float64 (year,
+    pixel).
     """
     years, pixels = first.shape
-    sums, parts = np.zeros((years, pixels)), np.zeros(years * pixels)
-    excess, half = np.empty(BUFFER + pixels), np.empty(BUFFER + pixels)
-    season, found = np.empty(BUFFER + pixels, np.int64), np.empty(pixels, np.int64)
-    crosses = np.zeros(pixels, np.int64)
+    sums, parts = np.zeros((years, pixels)), np.zeros(2 * years * pixels)
+    # Of each day collected: mean less threshold, half the range, and its season; the seasons are
+    # counted on for days that cross the cap.
+    size = BUFFER + 2 * pixels + 1
+    excess, half, season = np.empty(size), np.empty(size), np.empty(size, np.int64)
+    crosses, found = np.zeros(pixels, np.int64), np.empty(pixels, np.int64)
     count = 0
     for year in range(years):
         start, stop = _span(first[year], end[year], low.shape[0])
         for day in range(start, stop):
             _add_whole_days(
-                low[day], high[day], first[year], end[year], day, threshold, sums[year], crosses
+                low[day], high[day], first[year], end[year], day, base, cap, sums[year], crosses
             )
             several = 0
             for pixel in range(pixels):
                 found[several] = pixel
-                several += crosses[pixel]
-            for i in range(several):
-                cold = np.float64(low[day, found[i]])
-                warm = np.float64(high[day, found[i]])
-                excess[count + i] = 0.5 * (cold + warm) - threshold
-                half[count + i] = 0.5 * (warm - cold)
-                season[count + i] = year * pixels + found[i]
-            count += several
+                several += 1 if crosses[pixel] > 0 else 0
+            for pixel in found[:several]:
+                cold, warm = np.float64(low[day, pixel]), np.float64(high[day, pixel])
+                mean, number = 0.5 * (cold + warm), year * pixels + pixel
+                excess[count], half[count], season[count] = mean - base, 0.5 * (warm - cold), number
+                count += crosses[pixel] & 1
+                excess[count], half[count] = mean - cap, 0.5 * (warm - cold)
+                season[count] = years * pixels + number
+                count += crosses[pixel] >> 1
             if count > BUFFER:
                 _add_parts(excess[:count], half, season, parts)
                 count = 0
     _add_parts(excess[:count], half, season, parts)
-    sums += parts.reshape(years, pixels)
+    both = parts.reshape(2, years, pixels)
+    sums += both[0] - both[1]
     _blank(sums, first, end, low.shape[0])
     return sums
 
@@ -84,22 +94,25 @@ def _add_whole_days(
     first: np.ndarray,
     end: np.ndarray,
     day: int,
-    threshold: float,
+    base: float,
+    cap: float,
     sums: np.ndarray,
     crosses: np.ndarray,
 ) -> None:  # pragma: no cover - compiled
-    """Add the degree days of pixels that lie above the threshold all day; mark those that cross it.
+    """Add what lies above a threshold all day; mark the pixels that cross base (1) and cap (2).
 
     A missing value makes the sum missing.
     """
     for pixel in range(sums.size):
         cold, warm = np.float64(low[pixel]), np.float64(high[pixel])
+        mean = 0.5 * (cold + warm)
         inside = (first[pixel] <= day) & (day < end[pixel])
-        crossing = (cold < threshold) & (warm > threshold)
-        crosses[pixel] = 1 if inside & crossing else 0
-        below = (cold <= threshold) & (warm <= threshold)
-        excess = 0.0 if below | crossing else 0.5 * (cold + warm) - threshold
-        sums[pixel] += excess if inside else 0.0
+        over_base = (cold < base) & (warm > base)
+        over_cap = (cold < cap) & (warm > cap)
+        crosses[pixel] = (1 if inside & over_base else 0) + (2 if inside & over_cap else 0)
+        above = 0.0 if (cold <= base) & (warm <= base) | over_base else mean - base
+        cut = 0.0 if (cold <= cap) & (warm <= cap) | over_cap else mean - cap
+        sums[pixel] += above - cut if inside else 0.0
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
