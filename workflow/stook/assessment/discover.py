@@ -22,7 +22,7 @@ from stook.season.definition import Variable
 VARIABLES = get_args(Variable)
 FILE_NAME = re.compile(
     r"(?P<variable>[a-z]+)_(?P<table>[^_]+)_(?P<model>[^_]+)_(?P<scenario>[^_]+)_"
-    r"(?P<realisation>r\d+(?:i\d+)?(?:p\d+)?(?:f\d+)?)(?:_(?P<grid>[^_]+?))?"
+    r"(?P<realisation>r\d+(?:i\d+)?(?:p\d+)?(?:f\d+)?)(?:_(?P<grid>[a-z][^_]*))?"
     r"(?:_(?P<first>\d{4})\d*-(?P<last>\d{4})\d*)?\.nc4?"
 )
 """File name of a climate model grid by the convention of CMIP6 (CMIP5: without grid label)."""
