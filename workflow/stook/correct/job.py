@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-from contextlib import ExitStack
+from collections.abc import Iterator
+from contextlib import ExitStack, contextmanager
 from typing import Any
 
 import dask
 import dask.array as da
+import netCDF4
 import numpy as np
 import pandas as pd
 import xarray as xr
@@ -27,6 +29,9 @@ from stook.grids.missing import Reason
 
 _BLOCK_VARIABLE = ("time", "lat", "lon")
 
+_CHUNK_CACHE = 4 * 2**20
+"""Cache of a variable of a NetCDF file, bytes: a block is whole chunks, none is read twice."""
+
 
 def tile(assessment: Assessment, simulation: str, tile: str) -> None:
     """Write the corrected climate of one simulation on a tile of the analysis grid.
@@ -41,7 +46,11 @@ def tile(assessment: Assessment, simulation: str, tile: str) -> None:
     if assessment.reference is not None:
         parents.append(layout.prepared(OBSERVED, number))
     wildcards = {"simulation": simulation, "tile": tile}
-    with Job(assessment, "correct_tile", parents, wildcards) as job, ExitStack() as stack:
+    with (
+        _small_cache(),
+        Job(assessment, "correct_tile", parents, wildcards) as job,
+        ExitStack() as stack,
+    ):
         model = stack.enter_context(open_result(source))
         reference = None
         if assessment.reference is not None:
@@ -116,6 +125,17 @@ def summary(assessment: Assessment) -> None:
                 frames.append(summarise(name, parts, area))
         table = pd.concat(frames, ignore_index=True) if frames else pd.DataFrame(columns=COLUMNS)
         job.table(table[list(COLUMNS)], layout.evaluation_table)
+
+
+@contextmanager
+def _small_cache() -> Iterator[None]:
+    """Let NetCDF files that are opened inside keep few chunks in memory."""
+    before = netCDF4.get_chunk_cache()
+    netCDF4.set_chunk_cache(_CHUNK_CACHE)
+    try:
+        yield
+    finally:
+        netCDF4.set_chunk_cache(*before)
 
 
 def _check_reference(

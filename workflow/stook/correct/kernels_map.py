@@ -82,11 +82,11 @@ def quantile_delta(f, packed, count, plan, o_windows, o_sizes, h_windows, h_size
     counts, ranks, sizes, o_scale, h_scale = work
     rank_in_windows(f, packed, count, plan, counts, ranks)
     slot_sizes(counts, plan, sizes)
-    for slot in range(sizes.size):
-        if sizes[slot]:
-            window = slot % plan.windows
-            o_scale[slot] = o_sizes[window] / sizes[slot]
-            h_scale[slot] = h_sizes[window] / sizes[slot]
+    for number in range(sizes.size):
+        if sizes[number]:
+            days = number % plan.windows
+            o_scale[number] = o_sizes[days] / sizes[number]
+            h_scale[number] = h_sizes[days] / sizes[number]
     capped = 0
     for time in range(f.size):
         value = float(f[time])

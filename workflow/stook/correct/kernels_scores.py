@@ -125,16 +125,23 @@ def _share_from(values, size, threshold):
 @njit(cache=True, nogil=True)
 def _distance(a, n, b, m):
     """Return the largest distance of two empirical distributions (Kolmogorov-Smirnov)."""
-    i = j = 0
+    per_a, per_b = 1.0 / n, 1.0 / m
+    i = j = np.uint32(0)
     largest = 0.0
+    last = -math.inf
     while i < n and j < m:
-        value = min(a[i], b[j])
-        while i < n and a[i] == value:
-            i += 1
-        while j < m and b[j] == value:
-            j += 1
-        largest = max(largest, abs(i / n - j / m))
-    return largest
+        first, second = a[i], b[j]
+        lower = min(first, second)
+        apart = abs(i * per_a - j * per_b) if lower > last else 0.0  # not between equal values
+        largest = max(largest, apart)
+        last = lower
+        i += np.uint32(first <= second)
+        j += np.uint32(second <= first)
+    while i < n and a[i] == last:
+        i += np.uint32(1)
+    while j < m and b[j] == last:
+        j += np.uint32(1)
+    return max(largest, abs(i * per_a - j * per_b))
 
 
 @njit(cache=True, nogil=True)

@@ -101,9 +101,9 @@ def deal_to_windows(values, packed, count, plan, windows, sizes):
             size = np.uint32(sizes[window])
             windows[window, size] = value
             sizes[window] = size + np.uint32(1)
-    for window in range(plan.windows):
-        if sizes[window]:
-            windows[window, sizes[window]] = windows[window, sizes[window] - 1]
+    for number in range(plan.windows):
+        if sizes[number]:
+            windows[number, sizes[number]] = windows[number, sizes[number] - 1]
 
 
 @njit(cache=True, nogil=True, inline="always")
