@@ -47,7 +47,8 @@ def crop_layers(
     grid
         The whole analysis grid.
     overlay
-        ``coverage(region, lat, lon)`` on the grid of the run, a part of the analysis grid.
+        ``coverage(region, lat, lon)`` on the grid of the run, a part of the analysis grid; in a
+        run of some regions ``mostly_elsewhere(lat, lon)``, where none of them is the main one.
     subset
         Whether pixels outside every region of the overlay are left out.
 
@@ -71,6 +72,8 @@ def crop_layers(
     main_region = np.full(here.shape, -1, dtype=np.int16)
     if coverage.shape[0]:
         main_region = np.where(most > 0, coverage.argmax(axis=0), -1).astype(np.int16)
+    if "mostly_elsewhere" in overlay:
+        main_region[overlay["mostly_elsewhere"].values == 1] = -1
     three, two = ("crop_system", "lat", "lon"), ("lat", "lon")
     return xr.Dataset(
         {name: (three, values, _ATTRIBUTES[name]) for name, values in fields.items()}

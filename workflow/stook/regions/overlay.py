@@ -63,7 +63,9 @@ def overlay_dataset(assessment: Assessment) -> xr.Dataset:
     -------
     Dataset
         ``coverage`` (region, lat, lon): share of the cell's area on the sphere inside the region;
-        in a full run ``covered`` (lat, lon): share inside any region. Both float64, 0 to 1.
+        in a full run ``covered`` (lat, lon): share inside any region. Both float64, 0 to 1. In a
+        run of some regions ``mostly_elsewhere`` (lat, lon) int8: 1 where a region that is not
+        asked for covers most of the cell, so that its main region is that of the full run.
     """
     regions = read_regions(assessment)
     grid = crop_grid(assessment, analysis_grid(assessment), regions)
@@ -80,6 +82,16 @@ def overlay_dataset(assessment: Assessment) -> xr.Dataset:
             ("lat", "lon"),
             _lazy_covered(chosen, variables["coverage"].data, grid),
             {"long_name": "share of the cell's area inside any region", "units": "1"},
+        )
+    else:
+        variables["mostly_elsewhere"] = xr.Variable(
+            ("lat", "lon"),
+            _lazy_elsewhere(regions, chosen, grid),
+            {
+                "long_name": "whether a region that is not asked for covers most of the cell",
+                "flag_values": np.array([0, 1], dtype=np.int8),
+                "flag_meanings": "no yes",
+            },
         )
     names = xr.Variable("region", np.array(chosen.names), {"long_name": "name of the region"})
     return xr.Dataset(variables, grid.coordinates() | {"region": names})
@@ -107,6 +119,15 @@ def _lazy_covered(regions: Regions4326, shares: da.Array, grid: AnalysisGrid) ->
         return da.minimum(shares.sum(axis=0), 1.0)
     together = shapely.union_all(regions.shapes)
     return _lazy_coverage([together], grid)[0]
+
+
+def _lazy_elsewhere(regions: Regions4326, chosen: Regions4326, grid: AnalysisGrid) -> da.Array:
+    """Return where the region with most coverage, the first of equals, is not a chosen one."""
+    shares = _lazy_coverage(regions.shapes, grid)
+    other = ~np.isin(regions.names, chosen.names)
+    main = da.argmax(shares, axis=0)
+    elsewhere = main.map_blocks(lambda block: other[block], dtype=bool)
+    return (elsewhere & (shares.max(axis=0) > 0)).astype(np.int8)
 
 
 def _band_edges(rows: int) -> list[int]:
