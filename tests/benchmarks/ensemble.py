@@ -4,10 +4,11 @@
         [--crops 4] [--years 130] [--json]
 
 It writes invented totals of one simulation and crop, gives every other simulation and crop the same
-file, and runs the job ``ensemble_changes`` on them, from reading to the tables written. Beside it
-stands the time pandas takes to read the same files, production alone. With ``--json`` the last line
-is one JSON object: seconds, seconds_processor, seconds_reading, rows_million, peak_mib (of the
-whole process).
+file, and runs the jobs ``ensemble_changes`` and ``ensemble_risk`` on them one after the other, from
+reading to the tables written. Beside them stands the time pandas takes to read the same files,
+production alone. With ``--json`` the last line is one JSON object: seconds (both jobs),
+seconds_changes, seconds_risk, seconds_processor (both, all threads), seconds_reading,
+rows_million, peak_mib (of the whole process).
 """
 
 from __future__ import annotations
@@ -29,7 +30,7 @@ from stook.assessment.load import load_assessment
 from stook.assessment.schema import Assessment
 from stook.assessment.simulations import all_simulations
 from stook.audit.ledger import Job, record_path
-from stook.ensemble.job import changes
+from stook.ensemble.job import changes, risk
 from stook.regions.totals import Totals, totals_table
 
 LAYER = {"area": 1, "calendar": {"planting": 100, "maturity": 200}, "baseline_yield": 5}
@@ -123,9 +124,12 @@ def main() -> None:
         paths = write_totals(assessment, table)
         rows = len(table) * len(paths) / 1e6
         del table, totals
-        start, busy = time.perf_counter(), time.process_time()
-        changes(assessment)
-        seconds, busy = time.perf_counter() - start, time.process_time() - busy
+        seconds, busy = {}, {}
+        for job in (changes, risk):
+            start, used = time.perf_counter(), time.process_time()
+            job(assessment)
+            seconds[job.__name__] = time.perf_counter() - start
+            busy[job.__name__] = time.process_time() - used
         start = time.perf_counter()
         for path in paths:
             pd.read_parquet(path, columns=["production_t"])
@@ -137,14 +141,17 @@ def main() -> None:
         f"{given.simulations} simulations x {given.draws} draws x {given.regions} regions x "
         f"{given.crops} crops x {given.years} years: {rows:.0f} million rows"
     )
-    print(f"| task | s |\n|---|---|\n| ensemble_changes | {seconds:.1f} |")
-    print(f"| of which on the processor, all threads | {busy:.1f} |")
-    print(f"| reading production alone | {reading:.1f} |")
+    print("| task | s | on the processor, all threads, s |\n|---|---|---|")
+    for name, value in seconds.items():
+        print(f"| ensemble_{name} | {value:.1f} | {busy[name]:.1f} |")
+    print(f"| reading production alone | {reading:.1f} | |")
     print(f"peak memory {peak:.0f} MiB")
     if given.json:
         result = {
-            "seconds": round(seconds, 2),
-            "seconds_processor": round(busy, 2),
+            "seconds": round(sum(seconds.values()), 2),
+            "seconds_changes": round(seconds["changes"], 2),
+            "seconds_risk": round(seconds["risk"], 2),
+            "seconds_processor": round(sum(busy.values()), 2),
             "seconds_reading": round(reading, 2),
             "rows_million": round(rows, 1),
             "peak_mib": round(peak, 1),

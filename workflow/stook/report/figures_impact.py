@@ -14,7 +14,7 @@ from matplotlib.colors import BoundaryNorm
 from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
 
-from stook.report.figures_maps import diverging, draw_map, map_legend, map_shape
+from stook.report.figures_maps import HATCH, diverging, draw_map, map_legend, map_shape
 from stook.report.style import (
     INK,
     PALE,
@@ -168,7 +168,7 @@ def impact_map(
         for spare in axes.ravel()[len(chosen) :]:
             spare.set_axis_off()
         for axis, ((crop, system), one) in zip(axes.ravel(), chosen.items(), strict=False):
-            draw_map(axis, one, "impact", one[test].values > level, norm, polygons)
+            draw_map(axis, one, "impact", {HATCH: one[test].values > level}, norm, polygons)
             axis.set_title(f"{crop}, {system}")
         bar = figure.colorbar(
             ScalarMappable(norm, diverging()), ax=axes, shrink=0.85, aspect=30, pad=0.02
@@ -176,7 +176,7 @@ def impact_map(
         bar.set_ticks(norm.boundaries.tolist())
         bar.set_label("change of yield, %")
         bar.outline.set_visible(False)
-        map_legend(figure, f"not more than chance (p above {level:g})")
+        map_legend(figure, {HATCH: f"not more than chance (p above {level:g})"})
     return Drawing(
         f"impact_map_{period}",
         "Change of yield by the trends of the observed weather, "

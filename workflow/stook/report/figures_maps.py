@@ -1,8 +1,11 @@
-"""Maps of yield change: a panel per water system and scenario, hatched where models disagree."""
+"""Maps of yield change: a panel per water system and scenario, hatched where not to be relied on.
+
+With classes of robustness the hatching shows them; without, where models disagree on the sign.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 
 import geopandas as gpd
 import matplotlib as mpl
@@ -15,6 +18,7 @@ from matplotlib.colors import BoundaryNorm, Colormap
 from matplotlib.patches import Patch, PathPatch
 from matplotlib.path import Path as Outline
 
+from stook.ensemble.robustness import Signal
 from stook.report.style import (
     INK,
     QUIET,
@@ -27,7 +31,16 @@ from stook.report.style import (
 )
 from stook.report.tables import AGREEMENT
 
+HATCH = "////"
+"""Hatching of what is not to be relied on."""
+
+_CROSSED = "xxxx"
 _NO_CROP = "#d3d8da"
+_DISAGREE = f"fewer than {percent(AGREEMENT)} of models agree on the sign"
+_CLASSES = {
+    HATCH: "no robust signal: fewer than 66 % of models change more than variability",
+    _CROSSED: "conflicting: at least 66 % do, but fewer than 80 % agree on the sign",
+}
 _STEPS = 10
 
 
@@ -55,6 +68,7 @@ def change_maps(
         Region outlines, EPSG:4326.
     """
     chosen = {key: dataset.sel(horizon=horizon) for key, dataset in pixels.items()}
+    robust = all("robustness" in dataset for dataset in chosen.values())
     systems = list(dict.fromkeys(system for system, _ in chosen))
     scenarios = list(dict.fromkeys(scenario for _, scenario in chosen))
     values = np.concatenate([d["change_p50"].values.ravel() for d in chosen.values()])
@@ -69,8 +83,7 @@ def change_maps(
             for column, scenario in enumerate(scenarios):
                 axis = axes[row, column]
                 one = chosen[system, scenario]
-                unsure = one["agreement"].values < AGREEMENT - 1e-9
-                draw_map(axis, one, "change_p50", unsure, norm, polygons)
+                draw_map(axis, one, "change_p50", _unsure(one, robust), norm, polygons)
                 axis.set_title(f"{crop}, {system} - {scenario}")
         bar = figure.colorbar(
             ScalarMappable(norm, diverging()), ax=axes, shrink=0.85, aspect=30, pad=0.02
@@ -78,15 +91,35 @@ def change_maps(
         bar.set_ticks(norm.boundaries.tolist())
         bar.set_label("median yield change, %")
         bar.outline.set_visible(False)
-        map_legend(figure, f"fewer than {percent(AGREEMENT)} of models agree on the sign")
+        map_legend(figure, _CLASSES if robust else {HATCH: _DISAGREE})
     return Drawing(
         f"map_{crop}_{horizon}",
-        f"Median yield change of {crop}, {horizon} against the baseline. Hatched: fewer than "
-        f"{percent(AGREEMENT)} of models agree on the sign. Grey: no harvested area, or no value. "
-        "Lines: regions.",
+        f"Median yield change of {crop}, {horizon} against the baseline. Hatched: "
+        f"{_hatched(robust)}. Grey: no harvested area, or no value. Lines: regions.",
         _alt(chosen, crop, horizon),
         figure,
-        _data(chosen, crop, horizon),
+        _data(chosen, crop, horizon, robust),
+    )
+
+
+def _unsure(dataset: xr.Dataset, robust: bool) -> dict[str, np.ndarray]:
+    """Return the pixels of each hatching."""
+    if not robust:
+        return {HATCH: dataset["agreement"].values < AGREEMENT - 1e-9}
+    classes = dataset["robustness"].values
+    return {
+        HATCH: classes == Signal.NO_ROBUST_SIGNAL,
+        _CROSSED: classes == Signal.CONFLICTING,
+    }
+
+
+def _hatched(robust: bool) -> str:
+    if not robust:
+        return _DISAGREE
+    return (
+        "slanted, no robust signal (fewer than 66 % of models change more than variability gives "
+        "in nine cases of ten); crossed, conflicting (at least 66 % do, but fewer than 80 % agree "
+        "on the sign); not hatched, robust (IPCC AR6 WGI, Cross-Chapter Box Atlas.1)"
     )
 
 
@@ -106,26 +139,25 @@ def draw_map(
     axis: Axes,
     dataset: xr.Dataset,
     name: str,
-    unsure: np.ndarray,
+    unsure: Mapping[str, np.ndarray],
     norm: BoundaryNorm,
     polygons: gpd.GeoDataFrame,
 ) -> None:
-    """Draw one variable (lat, lon), hatched where it is unsure, with the outlines of regions."""
+    """Draw one variable (lat, lon), hatched where it is unsure, with the outlines of regions.
+
+    `unsure` holds the pixels of each hatching.
+    """
     lat, lon = _edges(dataset, "lat"), _edges(dataset, "lon")
     axis.set_facecolor(_NO_CROP)
     change = np.ma.masked_invalid(dataset[name].values)
     axis.pcolormesh(lon, lat, change, norm=norm, cmap=diverging(), rasterized=True)
-    unsure = ~change.mask & unsure
-    if unsure.any():
-        axis.add_patch(
-            PathPatch(
-                cells_outline(unsure, lat, lon),
-                facecolor="none",
-                edgecolor=INK,
-                hatch="////",
-                linewidth=0,
+    for hatch, pixels in unsure.items():
+        marked = ~np.ma.getmaskarray(change) & pixels
+        if marked.any():
+            outline = cells_outline(marked, lat, lon)
+            axis.add_patch(
+                PathPatch(outline, facecolor="none", edgecolor=INK, hatch=hatch, linewidth=0)
             )
-        )
     polygons.boundary.plot(ax=axis, color=INK, linewidth=0.7, aspect=None)
     axis.set_xlim(lon[0], lon[-1])
     axis.set_ylim(lat[0], lat[-1])
@@ -163,19 +195,17 @@ def cells_outline(mask: np.ndarray, lat: np.ndarray, lon: np.ndarray) -> Outline
     return Outline(corners, codes)
 
 
-def map_legend(figure: mpl.figure.Figure, hatched: str) -> None:
-    """Say what hatched and grey pixels are."""
+def map_legend(figure: mpl.figure.Figure, hatched: Mapping[str, str]) -> None:
+    """Say what each hatching and grey pixels are."""
     patches = [
-        Patch(
-            facecolor="white",
-            edgecolor=INK,
-            hatch="////",
-            linewidth=0.4,
-            label=hatched,
-        ),
-        Patch(facecolor=_NO_CROP, edgecolor=QUIET, linewidth=0.4, label="no crop or no value"),
+        Patch(facecolor="white", edgecolor=INK, hatch=hatch, linewidth=0.4, label=label)
+        for hatch, label in hatched.items()
     ]
-    figure.legend(handles=patches, loc="outside lower left", ncols=2, fontsize=8.5)
+    patches.append(
+        Patch(facecolor=_NO_CROP, edgecolor=QUIET, linewidth=0.4, label="no crop or no value")
+    )
+    columns = 2 if len(patches) == 2 else 1
+    figure.legend(handles=patches, loc="outside lower left", ncols=columns, fontsize=8.5)
 
 
 def _alt(chosen: Mapping[tuple[str, str], xr.Dataset], crop: str, horizon: str) -> str:
@@ -194,11 +224,14 @@ def _alt(chosen: Mapping[tuple[str, str], xr.Dataset], crop: str, horizon: str) 
     return f"Maps of yield change of {crop}, {horizon}. {'; '.join(parts)}."
 
 
-def _data(chosen: Mapping[tuple[str, str], xr.Dataset], crop: str, horizon: str) -> pd.DataFrame:
+def _data(
+    chosen: Mapping[tuple[str, str], xr.Dataset], crop: str, horizon: str, robust: bool
+) -> pd.DataFrame:
     parts = []
-    names: Sequence[str] = ("change_p05", "change_p50", "change_p95", "agreement", "models")
+    names = ["change_p05", "change_p50", "change_p95", "agreement", "models"]
+    names += ["robustness"] if robust else []
     for (system, scenario), dataset in chosen.items():
-        frame = dataset[list(names)].to_dataframe().reset_index()
+        frame = dataset[names].to_dataframe().reset_index()
         frame = frame[frame["change_p50"].notna()]
         parts.append(
             frame.assign(crop=crop, system=system, scenario=scenario, horizon=horizon)[

@@ -6,7 +6,7 @@ import datetime
 
 from stook.assessment.load import assessment_digest
 from stook.assessment.schema import Assessment
-from stook.report import sections
+from stook.report import sections, sections_risk
 from stook.report.page import Page, render
 from stook.report.publisher import Publisher
 from stook.report.reading import read_warnings
@@ -32,6 +32,9 @@ def page(assessment: Assessment) -> None:
     sections.add_results(source, content, publisher)
     sections.add_maps(source, content, publisher)
     sections.add_years(source, content, publisher)
+    sections_risk.add_uncertainty(source, content, publisher)
+    sections_risk.add_bad_years(source, content, publisher)
+    sections_risk.add_supply(source, content, publisher)
     sections.add_drivers(source, content, publisher)
     sections.add_trends(source, content, publisher)
     add_impact(source, content, publisher)

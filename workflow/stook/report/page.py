@@ -71,6 +71,13 @@ class Page:
     series: list[Picture] = field(default_factory=list)
     drivers: list[Picture] = field(default_factory=list)
     driver_tables: list[Table] = field(default_factory=list)
+    uncertainty: list[Picture] = field(default_factory=list)
+    uncertainty_tables: list[Table] = field(default_factory=list)
+    level_tables: list[Table] = field(default_factory=list)
+    risk_tables: list[Table] = field(default_factory=list)
+    supply_tables: list[Table] = field(default_factory=list)
+    supply_basis: str = ""
+    supply_need: str = ""
     trends: list[Picture] = field(default_factory=list)
     trend_tables: list[Table] = field(default_factory=list)
     trend_text: str = ""

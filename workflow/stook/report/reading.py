@@ -171,11 +171,20 @@ def significant_shares(path: Path, area: xr.DataArray) -> dict[tuple[str, str], 
 def ensemble_grids(
     assessment: Assessment, crop: str, scenarios: Sequence[str]
 ) -> Mapping[tuple[str, str], xr.Dataset]:
-    """Return the ensemble pixels of a crop by (system, scenario), loaded."""
+    """Return the ensemble pixels of a crop by (system, scenario), loaded.
+
+    With them the class ``robustness`` of every change, if it was computed.
+    """
     layout = Layout.of(assessment)
     result = {}
     for system in assessment.crops[crop].systems:
         for scenario in scenarios:
             with open_result(layout.ensemble_pixels(crop, system, scenario)) as dataset:
-                result[system, scenario] = dataset.load()
+                pixels = dataset.load()
+            path = layout.robustness_pixels(crop, system, scenario)
+            if path.exists():
+                with open_result(path) as dataset:
+                    chosen = dataset["robustness"].sel(horizon=pixels["horizon"].values)
+                    pixels = pixels.assign(robustness=chosen.load())
+            result[system, scenario] = pixels
     return result

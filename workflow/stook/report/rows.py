@@ -118,7 +118,7 @@ def index_table(
         f"Weather of the growing season, {horizon} against the baseline: mean over the harvested "
         "area, and the lowest and highest simulation",
         columns,
-        _merge_equal(rows, 3),
+        merge_equal(rows, 3),
         numbers=frozenset({4, 5, 6}),
     )
 
@@ -154,7 +154,7 @@ def trend_table(trends: pd.DataFrame, caption: str) -> Table:
         *(f"p, {_TESTS[name]}" for name in tests),
         "Change of slope, year (p)",
     ]
-    return Table(caption, columns, _merge_equal(rows, 2), numbers=frozenset(range(3, len(columns))))
+    return Table(caption, columns, merge_equal(rows, 2), numbers=frozenset(range(3, len(columns))))
 
 
 def field_table(fields: pd.DataFrame, units: Mapping[tuple[str, str, str], str]) -> Table:
@@ -199,7 +199,7 @@ def field_table(fields: pd.DataFrame, units: Mapping[tuple[str, str, str], str])
         "Trends over the whole crop area: the area-weighted mean, and the share of area whose own "
         "trend is significant against the share in randomised fields",
         columns,
-        _merge_equal(rows, 3),
+        merge_equal(rows, 3),
         numbers=frozenset(range(4, 10)),
     )
 
@@ -225,7 +225,7 @@ def trend_summary_table(summary: pd.DataFrame, level: float) -> Table:
     return Table(
         f"Regions whose yield trend is more than chance at level {level:g}",
         columns,
-        _merge_equal(rows, 1),
+        merge_equal(rows, 1),
         numbers=frozenset(range(3, 7)),
     )
 
@@ -264,7 +264,7 @@ def impact_table(impacts: pd.DataFrame, test: str) -> Table:
     return Table(
         "Impact of the trends of the observed weather on yields, water systems together",
         columns,
-        _merge_equal(rows, 2),
+        merge_equal(rows, 2),
         numbers=frozenset(range(3, 9)),
     )
 
@@ -290,12 +290,12 @@ def correction_table(evaluation: pd.DataFrame) -> Table:
     return Table(
         "Largest absolute value of any simulation, mean over pixels",
         ["Variable", "Statistic", "Season", "Unit", "Raw", "Corrected"],
-        _merge_equal(body, 2),
+        merge_equal(body, 2),
         numbers=frozenset({4, 5}),
     )
 
 
-def _merge_equal(rows: list[list[Any]], heads: int) -> list[list[Any]]:
+def merge_equal(rows: list[list[Any]], heads: int) -> list[list[Any]]:
     """Join the equal heading cells of following rows into one cell that spans them."""
     result: list[list[Any]] = [[] for _ in rows]
     for column in range(heads):

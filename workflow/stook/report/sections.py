@@ -65,20 +65,30 @@ def add_maps(source: Source, page: Page, publisher: Publisher) -> None:
         return
     for crop in source.assessment.crops:
         pixels = ensemble_grids(source.assessment, crop, source.scenarios)
-        parents = [
-            source.layout.ensemble_pixels(crop, system, scenario) for system, scenario in pixels
-        ]
+        paths = {key: _pixel_files(source, crop, *key) for key in pixels}
+        parents = [path for own in paths.values() for path in own]
         drawing = change_maps(pixels, crop, list(source.horizons)[-1], source.polygons)
         page.maps.append(publisher.drawing(drawing, parents))
         for (system, scenario), dataset in pixels.items():
             publisher.grids(
                 f"change_{crop}_{system}_{scenario}",
                 dataset,
-                {str(horizon): _CHANGE_BANDS for horizon in dataset["horizon"].values},
+                {str(horizon): _bands(dataset) for horizon in dataset["horizon"].values},
                 "horizon",
-                [source.layout.ensemble_pixels(crop, system, scenario)],
+                paths[system, scenario],
                 f"Yield change of {crop}, {system}, {scenario}",
             )
+
+
+def _pixel_files(source: Source, crop: str, system: str, scenario: str) -> list[Path]:
+    """Return the files of the pixels of one crop, system and scenario that are there."""
+    robustness = source.layout.robustness_pixels(crop, system, scenario)
+    changes = source.layout.ensemble_pixels(crop, system, scenario)
+    return [changes, robustness] if robustness.exists() else [changes]
+
+
+def _bands(dataset: xr.Dataset) -> tuple[str, ...]:
+    return (*_CHANGE_BANDS, "robustness") if "robustness" in dataset else _CHANGE_BANDS
 
 
 def add_years(source: Source, page: Page, publisher: Publisher) -> None:
