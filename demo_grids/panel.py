@@ -52,7 +52,7 @@ trend: linear
 
 specifications:
   growth-heat-rain:
-    growth: {form: linear, index: growth}
+    growth: {form: piecewise-linear, index: growth, knots: [1600, 1950]}
     heat: {form: linear, index: heat}
     rain: {form: quadratic, index: rain}
     dry_spell: {form: linear, index: dry_spell}

@@ -68,6 +68,9 @@ class StandardErrors(Section):
     """How the covariance of the coefficients is estimated."""
 
     method: Standard = "cluster-unit"
+    small_sample: Literal["jackknife", "factor"] = Field(
+        "jackknife", description="of cluster-unit and cluster-year; cluster-unit-year: factor"
+    )
     replications: int = Field(500, ge=50, le=100000, description="of a bootstrap")
     block_years: int = Field(1, ge=1, description="consecutive years of a block, bootstrap-years")
     block_degrees: float = Field(

@@ -14,11 +14,11 @@ from linearmodels.panel import PanelOLS
 from scipy import stats
 
 from stook.errors import InputError
-from stook.fit.bootstrap import bootstrap
 from stook.fit.design import Design, check_collinearity, make_design
 from stook.fit.document import Fit
 from stook.fit.kernels import take_out
 from stook.fit.panel import Sample
+from stook.fit.resampling import bootstrap, jackknife
 from stook.yields.response import Term
 
 LEVEL = 0.95
@@ -110,9 +110,14 @@ def estimate(
     check_collinearity(design, terms, sample, name)
     reported = len(design.weather) + sum(not other.startswith("year.") for other in design.others)
     slopes, covariance, fitted, clusters = _panel_ols(fit, design, sample, reported, name)
-    if blocks is not None or fit.standard_errors.method == "bootstrap-years":
-        covariance, clusters = bootstrap(fit, design, sample, blocks, name, reported)
     count = len(design.weather)
+    choices = fit.standard_errors
+    if choices.method.startswith("bootstrap"):
+        covariance, clusters = bootstrap(fit, design, sample, blocks, name, reported)
+    elif choices.small_sample == "jackknife" and choices.method != "cluster-unit-year":
+        check_clusters(clusters, count, name)
+        key = choices.method.removeprefix("cluster-")
+        covariance = jackknife(design, pd.factorize(sample.rows[key])[0], name, reported)
     check_covariance(covariance[:count, :count], clusters, name)
     table = _table([*design.weather, *design.others][:reported], slopes, covariance, clusters - 1)
     residuals = design.response - fitted
@@ -142,21 +147,36 @@ def cluster_word(fit: Fit) -> str:
     }[fit.standard_errors.method]
 
 
-def check_covariance(covariance: np.ndarray, clusters: int, name: str) -> None:
-    """Check that a covariance has full rank.
+def check_clusters(clusters: int, count: int, name: str) -> None:
+    """Check that there are more clusters than coefficients.
 
     Raises
     ------
     InputError
-        If it is singular: more coefficients than clusters can tell apart.
+        If not: their covariance would be singular.
     """
+    if clusters <= count:
+        raise InputError(
+            f"specification {name}: the covariance of its {count} coefficients is singular: "
+            f"{clusters} clusters are too few; cluster otherwise, or use fewer terms"
+        )
+
+
+def check_covariance(covariance: np.ndarray, clusters: int, name: str) -> None:
+    """Check that a covariance has full rank, and no negative eigenvalue.
+
+    Raises
+    ------
+    InputError
+        If it is singular.
+    """
+    check_clusters(clusters, len(covariance), name)
     spread = np.sqrt(np.clip(np.diag(covariance), 1e-300, None))
     scaled = covariance / np.outer(spread, spread)
-    whole = clusters > len(covariance) and bool(np.isfinite(scaled).all())
-    if not whole or float(np.linalg.eigvalsh(scaled).min()) < _SINGULAR:
+    if not np.isfinite(scaled).all() or float(np.linalg.eigvalsh(scaled).min()) < _SINGULAR:
         raise InputError(
             f"specification {name}: the covariance of its {len(covariance)} coefficients is "
-            f"singular: {clusters} clusters are too few; cluster otherwise, or use fewer terms"
+            "singular or not positive; cluster otherwise, or use fewer terms"
         )
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 from collections.abc import Callable, Mapping
 from contextlib import ExitStack
 from dataclasses import dataclass
@@ -89,7 +90,7 @@ def run_fit(path: Path) -> Fitted:
         One line a fault: of the document, the panel, the weather, or what cannot be estimated.
     """
     fit = load_fit(path)
-    panel_path = path.parent / fit.panel
+    panel_path = _beside(path, fit.panel)
     panel = read_panel(panel_path, fit)
     weather, definitions, digests = _weather(path, fit, panel, panel_path)
     sample = make_sample(panel, weather, fit, panel_path)
@@ -124,7 +125,7 @@ def _fit(
     drawn = curves(written, sample, definitions, fit.link)
     left = residual_table(written, sample)
     title = f"{fit.crop}, {fit.system}: specification {chosen}"
-    folder = path.parent / fit.output
+    folder = _beside(path, fit.output)
     tables = {
         "specifications.csv": table,
         "coefficients.csv": coefficient_table(found, plain),
@@ -188,11 +189,11 @@ def _weather(
     """Return the weather of the units, the definitions of its indices, and its digests."""
     terms = _terms(fit)
     if fit.weather.table is not None:
-        table = path.parent / fit.weather.table
+        table = _beside(path, fit.weather.table)
         weather = table_weather(table, fit, terms)
         return weather, dict(fit.weather.indices), {"season indices": sha256(table)}
     assert fit.weather.assessment is not None
-    file = path.parent / fit.weather.assessment
+    file = _beside(path, fit.weather.assessment)
     assessment = load_assessment(file)
     if (fit.crop, fit.system) not in assessment.systems:
         known = ", ".join(f"{crop} {system}" for crop, system in assessment.systems)
@@ -215,6 +216,11 @@ def _weather(
         points = dict(zip(regions.names, regions.shapes, strict=True))
         panel["block"] = [_block(points[unit].representative_point(), side) for unit in panel.unit]
     return weather, definitions, digest
+
+
+def _beside(path: Path, given: Path) -> Path:
+    """Return a path of the document, relative to its folder, without ``..`` in it."""
+    return Path(os.path.normpath(path.parent / given))
 
 
 def _block(point: object, side: float) -> str:
