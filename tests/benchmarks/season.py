@@ -2,9 +2,9 @@
 
     python tests/benchmarks/season.py [--pixels N] [--years N] [--json]
 
-Processor time, one thread. Daily float32 weather of a temperate climate, whole series of a block of pixels;
-seasons of 150 days, planted between day 95 and day 115. A kernel visits the days of the seasons
-only; the pass of ``np.arcsin`` is over as many float64 values as these days, in blocks that stay
+Processor time, one thread. Daily float32 weather of a temperate climate, whole series of a block
+of pixels; seasons of 150 days, planted between day 95 and day 115. A kernel visits the days of
+the seasons only; the pass of ``np.arcsin`` is over as many float64 values as these days, in blocks that stay
 in the processor's cache. With ``--json`` the last line is one JSON object: kernel_over_arcsin
 (degree days between 10 and 30 degC, the heaviest: two thresholds), above_over_arcsin (degree days
 above 30), series_over_arcsin (the first, against as many values as the whole series has),
@@ -36,15 +36,20 @@ def weather(years: int, pixels: int) -> dict[str, np.ndarray]:
     """Return tasmin, tasmax (degC), pr (mm day-1), hurs (%), float32 (time, pixel)."""
     random = np.random.default_rng(1)
     days = 365 * years
-    position = (np.arange(days) % 365 / 365)[:, None]
-    shared = random.standard_normal((4, days, 1))
-    own = random.standard_normal((4, days, pixels))
-    mean = 12 - 12 * np.cos(2 * np.pi * (position - 0.04)) + 4 * shared[0] + own[0]
-    half = np.maximum(5 + 1.5 * shared[1] + 0.5 * own[1], 0.25)
-    rain = np.maximum(4 * (shared[2] + own[2] - 0.5), 0)
-    humidity = np.clip(70 + 10 * shared[3] + 5 * own[3], 5, 100)
-    values = {"tasmin": mean - half, "tasmax": mean + half, "pr": rain, "hurs": humidity}
-    return {name: value.astype(np.float32) for name, value in values.items()}
+    position = np.arange(days) % 365 / 365
+    # Mean temperature, half the range, rain, humidity: spread of all pixels, and of each.
+    spread = ((4.0, 1.0), (1.5, 0.5), (4.0, 4.0), (10.0, 5.0))
+    mean, half, rain, humidity = (
+        (shared * random.standard_normal((days, 1))).astype(np.float32)
+        + np.float32(own) * random.standard_normal((days, pixels), dtype=np.float32)
+        for shared, own in spread
+    )
+    mean += (12 - 12 * np.cos(2 * np.pi * (position - 0.04))).astype(np.float32)[:, None]
+    half += 5
+    np.maximum(half, 0.25, out=half)
+    np.maximum(rain - 2, 0, out=rain)
+    np.clip(humidity + 70, 5, 100, out=humidity)
+    return {"tasmin": mean - half, "tasmax": mean + half, "pr": rain, "hurs": humidity}
 
 
 def best(tasks: dict[str, Callable[[], object]], repeats: int) -> dict[str, float]:

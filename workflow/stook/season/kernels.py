@@ -62,14 +62,13 @@ def season_degree_days(
     for year in range(years):
         start, stop = _span(first[year], end[year], low.shape[0])
         for day in range(start, stop):
-            _add_whole_days(
-                low[day], high[day], first[year], end[year], day, base, cap, sums[year], crosses
-            )
+            _add_whole_days(low, high, first, end, day, year, base, cap, sums, crosses)
             several = 0
             for pixel in range(pixels):
                 found[several] = pixel
                 several += 1 if crosses[pixel] > 0 else 0
-            for pixel in found[:several]:
+            for i in range(several):
+                pixel = found[i]
                 cold, warm = np.float64(low[day, pixel]), np.float64(high[day, pixel])
                 mean, number = 0.5 * (cold + warm), year * pixels + pixel
                 excess[count], half[count], season[count] = mean - base, 0.5 * (warm - cold), number
@@ -94,6 +93,7 @@ def _add_whole_days(
     first: np.ndarray,
     end: np.ndarray,
     day: int,
+    year: int,
     base: float,
     cap: float,
     sums: np.ndarray,
@@ -103,16 +103,16 @@ def _add_whole_days(
 
     A missing value makes the sum missing.
     """
-    for pixel in range(sums.size):
-        cold, warm = np.float64(low[pixel]), np.float64(high[pixel])
+    for pixel in range(crosses.size):
+        cold, warm = np.float64(low[day, pixel]), np.float64(high[day, pixel])
         mean = 0.5 * (cold + warm)
-        inside = (first[pixel] <= day) & (day < end[pixel])
-        over_base = (cold < base) & (warm > base)
-        over_cap = (cold < cap) & (warm > cap)
-        crosses[pixel] = (1 if inside & over_base else 0) + (2 if inside & over_cap else 0)
-        above = 0.0 if (cold <= base) & (warm <= base) | over_base else mean - base
-        cut = 0.0 if (cold <= cap) & (warm <= cap) | over_cap else mean - cap
-        sums[pixel] += above - cut if inside else 0.0
+        inside = (first[year, pixel] <= day) & (day < end[year, pixel])
+        mark = 1 if (cold < base) & (warm > base) else 0
+        mark += 2 if (cold < cap) & (warm > cap) else 0
+        crosses[pixel] = mark if inside else 0
+        above = mean - base if cold >= base else 0.0
+        cut = mean - cap if cold >= cap else 0.0
+        sums[year, pixel] += above - cut + 0.0 * mean if inside else 0.0
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
