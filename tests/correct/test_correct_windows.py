@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from correct_inputs import CALENDARS, annual, days, months
-from stook.correct.windows import day_windows, minimum_count, year_windows
+from stook.correct.windows import Membership, Series, day_windows, minimum_count, year_windows
 
 
 @pytest.mark.parametrize("calendar", CALENDARS)
@@ -49,16 +49,41 @@ def test_windows_run_past_the_year_end() -> None:
     assert list(np.flatnonzero(first) + 1) == [*range(1, 19), *range(353, 366)]
 
 
+def window_of(axis: Series, found: Membership, year: int) -> tuple[int, int, int]:
+    own = found.own[year - axis.year[0]]
+    years = axis.year[(found.first <= own) & (own < found.first + found.number)]
+    return int(years[0]), int(years[-1]), len(years)
+
+
 def test_moving_years() -> None:
-    """Blocks of ten years from 1991; thirty years around each, held inside the series."""
+    """Blocks of ten years from 1991; thirty years around each, cut off at the ends."""
     axis = annual(1981, 2100)
     found = year_windows(axis, 1991, 30, 10)
-    starts = {1985: 1981, 1991: 1981, 2000: 1981, 2001: 1991, 2095: 2071, 2055: 2041}
-    for year, start in starts.items():
-        own = found.own[year - 1981]
-        members = (found.first <= own) & (own < found.first + found.number)
-        years = axis.year[members]
-        assert (years[0], years[-1], len(years)) == (start, start + 29, 30)
+    spans = {1985: (1981, 2000), 1991: (1981, 2010), 2000: (1981, 2010), 2001: (1991, 2020)}
+    spans |= {2055: (2041, 2070), 2085: (2071, 2100), 2095: (2081, 2100)}
+    for year, (first, last) in spans.items():
+        assert window_of(axis, found, year) == (first, last, last - first + 1)
+
+
+def test_windows_keep_two_thirds_of_their_years() -> None:
+    """One year of a block at either end still gets twenty years."""
+    axis = annual(1990, 2101)
+    found = year_windows(axis, 1991, 30, 10)
+    assert window_of(axis, found, 1990) == (1990, 2009, 20)
+    assert window_of(axis, found, 2101) == (2082, 2101, 20)
+    assert window_of(axis, found, 1991) == (1990, 2010, 21)
+
+
+@pytest.mark.parametrize("width", [5, 8, 30])
+@pytest.mark.parametrize("step", [1, 4, 10])
+def test_every_year_lies_in_its_own_window(width: int, step: int) -> None:
+    axis = annual(1988, 2017)
+    found = year_windows(axis, 1993, width, step)
+    for year in axis.year:
+        first, last, count = window_of(axis, found, year)
+        assert first <= year <= last
+        assert count == last - first + 1
+        assert count >= min(30, -(-2 * max(width, step) // 3))
 
 
 def test_short_series_have_one_window_of_years() -> None:

@@ -147,8 +147,9 @@ def year_windows(series: Series, anchor: int, width: int, step: int) -> Membersh
     """Return the moving windows of years of a series.
 
     Years are cut into blocks of `step` years counted from `anchor`. The window of a block has
-    `width` years centred on it and is shifted to lie inside the series; it is shorter only when
-    the series is.
+    `width` years centred on it. At the ends of the series it is cut off, so that a block in a
+    changing climate stays near the middle of its window, but it keeps two thirds of its width if
+    the series has them.
 
     Parameters
     ----------
@@ -167,17 +168,20 @@ def year_windows(series: Series, anchor: int, width: int, step: int) -> Membersh
     width = max(width, step)
     low, high = int(series.year.min()), int(series.year.max())
     years = np.arange(low, high + 1)
-    starts = anchor + (years - anchor) // step * step - (width - step) // 2
-    starts = np.maximum(np.minimum(starts, high - width + 1), low)
-    unique, own = np.unique(starts, return_inverse=True)
-    first = np.searchsorted(unique + width - 1, years, side="left")
-    last = np.searchsorted(unique, years, side="right") - 1
+    least = -(-2 * width // 3)
+    centred = anchor + (years - anchor) // step * step - (width - step) // 2
+    starts = np.clip(np.maximum(centred, low), low, max(high - least + 1, low))
+    ends = np.clip(np.minimum(centred + width - 1, high), min(low + least - 1, high), high)
+    windows, own = np.unique(np.stack([starts, ends], axis=1), axis=0, return_inverse=True)
+    own = own.ravel()
+    first = np.searchsorted(windows[:, 1], years, side="left")
+    last = np.searchsorted(windows[:, 0], years, side="right") - 1
     index = series.year - low
     return Membership(
         own[index].astype(np.int32),
         first[index].astype(np.int32),
         (last - first + 1)[index].astype(np.int32),
-        len(unique),
+        len(windows),
     )
 
 

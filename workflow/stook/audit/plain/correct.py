@@ -77,7 +77,7 @@ def correct_series(
     span = range(int(f.times.year.min()), int(f.times.year.max()) + 1)
     anchor = int(h.times.year.min())
     years_of = {year: moving_years(year, span, anchor, choice) for year in span}
-    first_year = np.array([years_of[int(year)][0] for year in f.times.year])
+    label = np.array([str(years_of[int(year)]) for year in f.times.year])
     for window in range(window_count(f.times, choice)):
         so, sh = (sorted_window(series, window, choice) for series in (o, h))
         if len(so) < least or len(sh) < least:
@@ -86,7 +86,7 @@ def correct_series(
             so, sh = (thin(values, choice.nodes) for values in (so, sh))
         inside = in_window(f.times, window, choice) & ~np.isnan(f.values)
         for years in sorted(set(years_of.values())):
-            mine = (own == window) & (first_year == years[0]) & ~np.isnan(f.values)
+            mine = (own == window) & (label == str(years)) & ~np.isnan(f.values)
             if not mine.any():
                 continue
             chosen = inside & (f.times.year >= years[0]) & (f.times.year <= years[1])
@@ -208,8 +208,15 @@ def moving_years(
     width = max(choice.cdf_years, choice.cdf_step_years)
     block = anchor + (year - anchor) // choice.cdf_step_years * choice.cdf_step_years
     start = block - (width - choice.cdf_step_years) // 2
-    start = max(min(start, span[-1] - width + 1), span[0])
-    return start, min(start + width - 1, span[-1])
+    end = min(start + width - 1, span[-1])
+    start = max(start, span[0])
+    least = math.ceil(2 * width / 3)
+    if end - start + 1 < least:  # at an end of the series
+        if end == span[-1]:
+            start = max(span[-1] - least + 1, span[0])
+        else:
+            end = min(span[0] + least - 1, span[-1])
+    return start, end
 
 
 # Values before and after the mapping
