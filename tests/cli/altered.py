@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import os
 import shutil
+import subprocess
 import sys
 from dataclasses import dataclass
 from pathlib import Path
@@ -79,6 +81,18 @@ class Case:
     def listing(self) -> list[str]:
         """Return every file and folder of the world."""
         return sorted(path.as_posix() for path in self.folder.rglob("*"))
+
+    def process(self, command: str, *arguments: str, **environment: str) -> tuple[int, str, str]:
+        """Run the command line in a process of its own; return exit status, output and errors."""
+        overrides = [text for setting in ONE_SIMULATION for text in ("--set", setting)]
+        done = subprocess.run(
+            [sys.executable, "-m", "stook.cli", command, str(self.file), *overrides, *arguments],
+            capture_output=True,
+            text=True,
+            env=os.environ | environment,
+            check=False,
+        )
+        return done.returncode, done.stdout, done.stderr
 
     def stook(self, command: str, *arguments: str, monkeypatch) -> int:
         """Run the command line on the assessment in this process; return its exit status."""
