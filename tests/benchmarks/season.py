@@ -4,11 +4,11 @@
 
 Processor time, one thread. Daily float32 weather of a temperate climate, whole series of a block
 of pixels; seasons of 150 days, planted between day 95 and day 115. A kernel visits the days of
-the seasons only; the pass of ``np.arcsin`` is over as many float64 values as these days, in blocks that stay
-in the processor's cache. With ``--json`` the last line is one JSON object: kernel_over_arcsin
-(degree days between 10 and 30 degC, the heaviest: two thresholds), above_over_arcsin (degree days
-above 30), series_over_arcsin (the first, against as many values as the whole series has),
-peak_mib (of the whole process after the kernels).
+the seasons only; the pass of ``np.arcsin`` is over as many float64 values as these days, in
+blocks that stay in the processor's cache. With ``--json`` the last line is one JSON object:
+kernel_over_arcsin (degree days between 10 and 30 degC, the heaviest: two thresholds),
+above_over_arcsin (degree days above 30), series_over_arcsin (the first, against as many values as
+the whole series has), peak_mib (of the whole process after the kernels).
 """
 
 # ruff: noqa: E402 - threads are limited before NumPy is imported

@@ -2,11 +2,11 @@
 
     python tests/benchmarks/yields.py [--draws N] [--pixels N] [--years N] [--json]
 
-Processor time, one thread. The kernel goes from the design matrix of four terms to the production of 50
-regions, every pixel in one or two of them, for the central estimate and all draws. The pass of
-``np.exp`` is over pixels x years x draws float64 values, in blocks that stay in the processor's
-cache. With ``--json`` the last line is one JSON object: draws_over_exp (log link),
-level_over_exp, peak_mib (of the whole process after the kernel, the inputs included).
+Processor time, one thread. The kernel goes from the design matrix of four terms to the production
+of 50 regions, every pixel in one or two of them, for all draws. The pass of ``np.exp`` is over
+pixels x years x draws float64 values, in blocks that stay in the processor's cache. With
+``--json`` the last line is one JSON object: draws_over_exp (log link), level_over_exp, peak_mib
+(of the whole process after the kernel, the inputs included).
 """
 
 # ruff: noqa: E402 - threads are limited before NumPy is imported
