@@ -115,6 +115,8 @@ def test_region_run_against_full_run(plain: Path, region: Path) -> None:
     # 4 rows and 2 columns of the region, 10 years; the third column is not computed there.
     assert files.loc[f"yields/{SIMULATION}/maize_rainfed.nc", "compared"] == 4 * 2 * 10
     assert files.loc[f"yields/{SIMULATION}/maize_rainfed.nc", "differing"] == 0
+    # Significance is compared where the pixel's main region is the same: the first column.
+    assert files.loc[f"trend/{SIMULATION}/maize_rainfed.nc", "compared"] == 4
     name = f"trend/{SIMULATION}/maize_rainfed_distribution.parquet"
     assert files.loc[name, "status"] == "not comparable"
     assert list(found.changes["region"]) == ["Saltmere"]

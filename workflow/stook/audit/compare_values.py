@@ -58,26 +58,27 @@ class Scope:
 
     Attributes
     ----------
-    computed
-        Per run, ``computed`` (lat, lon) of its layers; None where it has no layers.
+    layers
+        Per run, ``computed`` and ``main_region`` (lat, lon) of its layers and its regions; None
+        where it has none.
     same_part
         Whether both computed the same regions.
     """
 
-    computed: tuple[xr.DataArray | None, xr.DataArray | None]
+    layers: tuple[xr.Dataset | None, xr.Dataset | None]
     same_part: bool
 
     @classmethod
     def of(cls, a: Path, b: Path, same_part: bool) -> Scope:
         """Return what two results folders have in common."""
-        found = []
+        found: list[xr.Dataset | None] = []
         for root in (a, b):
             path = Layout(root).layers
-            mask = None
-            if path.is_file():
-                with open_result(path) as layers:
-                    mask = layers["computed"].load() != 0 if "computed" in layers else None
-            found.append(mask)
+            if not path.is_file():
+                found.append(None)
+                continue
+            with open_result(path) as layers:
+                found.append(layers[["computed", "main_region", "region"]].load())
         return cls((found[0], found[1]), same_part)
 
     def mask(self, dataset: xr.Dataset) -> xr.DataArray:
@@ -89,10 +90,26 @@ class Scope:
         result = xr.DataArray(np.ones(sizes, dtype=bool), here, ("lat", "lon"))
         if self.same_part:
             return result
-        for computed in self.computed:
-            if computed is not None:
-                result &= computed.reindex(here, fill_value=False)
+        for layers in self.layers:
+            if layers is not None:
+                result &= layers["computed"].reindex(here, fill_value=0) == 1
         return result
+
+    def same_main_region(self, mask: xr.DataArray) -> xr.DataArray:
+        """Return where, of a mask, the pixel is judged among those of the same region."""
+        one, other = self.layers
+        if self.same_part or mask.ndim == 0 or one is None or other is None:
+            return mask
+        named = [_main_names(layers, mask) for layers in (one, other)]
+        return mask & (named[0] == named[1])
+
+
+def _main_names(layers: xr.Dataset, mask: xr.DataArray) -> np.ndarray:
+    """Return the name of the main region of each pixel, empty for none."""
+    names = np.append(layers["region"].values.astype(object), "")
+    places = layers["main_region"].reindex(lat=mask["lat"], lon=mask["lon"], fill_value=-1)
+    found: np.ndarray = names[places.values]
+    return found
 
 
 @dataclass
@@ -243,7 +260,10 @@ def _compare_grids(
         for variable in map(str, one.data_vars):
             if variable not in other or _is_local(variable, both):
                 continue
-            for blocks in _blocks(one[variable], other[variable], mask):
+            # A pixel's false discovery rate is that of its main region.
+            judged = variable.startswith("significant")
+            there = scope.same_main_region(mask) if judged else mask
+            for blocks in _blocks(one[variable], other[variable], there):
                 difference = _compare_block(variable, *blocks, found)
                 if variable == wanted:
                     listed.append(_largest_pixels(difference, *blocks[:2], pixels))
