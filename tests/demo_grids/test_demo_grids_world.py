@@ -192,6 +192,7 @@ def test_the_same_seed_gives_the_same_bytes_and_another_seed_another_world(tmp_p
     changed = {name for name in made["a"] if made["a"][name] != made["c"][name]}
     assert {name.split("/")[0] for name in changed} == {
         "climate",
+        "fit",
         "reference",
         "responses",
         "assessment.yaml",

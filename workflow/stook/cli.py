@@ -120,6 +120,19 @@ def run(
 
 
 @app.command()
+def fit(
+    file: Annotated[Path, typer.Argument(metavar="FILE", help="The fit document.")],
+) -> None:
+    """Estimate a yield response from a yield panel and the observed season indices."""
+    from stook.fit.job import run_fit
+    from stook.fit.show import show_fit
+
+    with ERR.status("fitting"):
+        found = run_fit(file)
+    show_fit(found, OUT if OUT.is_terminal else Console(width=TABLE_WIDTH, highlight=False))
+
+
+@app.command()
 def verify(
     results: Annotated[Path, typer.Argument(metavar="RESULTS", help="The results folder.")],
 ) -> None:
