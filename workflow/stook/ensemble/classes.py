@@ -8,7 +8,7 @@ from itertools import pairwise
 import numpy as np
 import pandas as pd
 
-from stook.ensemble.changes import empty_table, members_of
+from stook.ensemble.changes import members_of
 from stook.ensemble.series import Models
 from stook.ensemble.summary import RunSummary, Years, labelled, period_weights
 
@@ -78,22 +78,18 @@ def class_table(
             own = np.repeat(weights[region][:, None] / change.shape[1], change.shape[1], axis=1)
             central = class_shares(values[region, :, 0], weights[region], edges)
             parts.append(
-                pd.DataFrame(
-                    {
-                        "region": name,
-                        "first": start,
-                        "last": stop,
-                        "members": int(np.isfinite(change).sum()),
-                        "simulations": int((weights[region] > 0).sum()),
-                        "number": np.arange(edges.size + 1),
-                        "lower": lower,
-                        "upper": upper,
-                        "share": class_shares(change.ravel(), own.ravel(), edges),
-                        "central_share": central,
-                    }
-                )
+                {
+                    "region": name,
+                    "first": start,
+                    "last": stop,
+                    "members": int(np.isfinite(change).sum()),
+                    "simulations": int((weights[region] > 0).sum()),
+                    "number": np.arange(edges.size + 1),
+                    "lower": lower,
+                    "upper": upper,
+                    "share": class_shares(change.ravel(), own.ravel(), edges),
+                    "central_share": central,
+                }
             )
-    if not parts:
-        return empty_table(CLASSES)
     names = {"system": first.system, "scenario": first.simulation.scenario}
     return labelled(parts, CLASSES, crop=first.crop, **names)

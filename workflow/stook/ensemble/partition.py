@@ -9,12 +9,13 @@ Stephenson & Hawkins 2011, J. Climate 24, 4634-4643). See docs/risk.md.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 import pandas as pd
 from numba import njit
 
-from stook.ensemble.changes import empty_table, members_of
+from stook.ensemble.changes import members_of
 from stook.ensemble.summary import RunSummary, labelled
 
 POLYNOMIAL, CROSSED = "polynomial", "crossed"
@@ -234,9 +235,6 @@ def partition_table(runs: Sequence[RunSummary], model_weight: np.ndarray) -> pd.
         if crossed is not None:
             whole = np.concatenate([found[region, :, :1], crossed], axis=1)
             parts.append(_rows(name, CROSSED, leads, whole, (*COMPONENTS, INTERACTION)))
-    parts = [part for part in parts if len(part)]
-    if not parts:
-        return empty_table(PARTITION)
     return labelled(parts, PARTITION, crop=first.crop, system=first.system)
 
 
@@ -274,7 +272,7 @@ def _crossed(
 
 def _rows(
     region: str, method: str, leads: np.ndarray, variances: np.ndarray, names: Sequence[str]
-) -> pd.DataFrame:
+) -> dict[str, Any]:
     """Return the rows of a region; lead times without a value are left out."""
     there = np.isfinite(variances).all(axis=1)
     values = variances[there]
@@ -284,13 +282,11 @@ def _rows(
     share = np.full(values.shape, np.nan)
     np.divide(values, total[:, None], out=share, where=total[:, None] > 0)
     years = leads[there]
-    return pd.DataFrame(
-        {
-            "region": region,
-            "method": method,
-            "year": np.repeat(years, len(names)),
-            "component": np.tile(np.array(names, dtype=object), years.size),
-            "variance": values.ravel(),
-            "share": share.ravel(),
-        }
-    )
+    return {
+        "region": region,
+        "method": method,
+        "year": np.repeat(years, len(names)),
+        "component": np.tile(np.array(names, dtype=object), years.size),
+        "variance": values.ravel(),
+        "share": share.ravel(),
+    }

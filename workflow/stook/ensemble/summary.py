@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -351,11 +352,30 @@ def period_weights(there: np.ndarray, models: Models) -> np.ndarray:
 
 
 def labelled(
-    parts: Sequence[pd.DataFrame], columns: Mapping[str, str], **same: str
+    parts: Sequence[Mapping[str, Any]], columns: Mapping[str, str], **same: str
 ) -> pd.DataFrame:
-    """Stack tables, add columns that are the same in every row, and set order and types."""
-    frame = pd.concat(list(parts), ignore_index=True).assign(**same)
-    return frame[list(columns)].astype(dict(columns))
+    """Stack groups of rows into one table of the given columns and types.
+
+    Parameters
+    ----------
+    parts
+        Values by column, an array or one value for all rows of the group; ``share`` is an array.
+    same
+        Columns that are the same in every row.
+    """
+    lengths = [len(part["share"]) for part in parts]
+    content: dict[str, Any] = {}
+    for name, kind in columns.items():
+        if name in same:
+            content[name] = np.full(sum(lengths), same[name], dtype=object)
+            continue
+        kept: Any = object if kind == "str" else kind
+        pieces = [
+            np.broadcast_to(np.asarray(part[name], dtype=kept), (length,))
+            for part, length in zip(parts, lengths, strict=True)
+        ]
+        content[name] = np.concatenate(pieces) if pieces else np.empty(0, kept)
+    return pd.DataFrame(content).astype(dict(columns))
 
 
 def stacked_rows(rows: Sequence[dict[str, object]], columns: dict[str, str]) -> pd.DataFrame:
