@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import pytest
+import snakemake.shell  # noqa: F401  keeps the sys.stdout of its import: not that of a test
 from altered import Case, linked_copy
 
 from demo_grids.world import generate

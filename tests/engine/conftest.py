@@ -5,6 +5,7 @@ from __future__ import annotations
 import shutil
 
 import pytest
+import snakemake.shell  # noqa: F401  keeps the sys.stdout of its import: not that of a test
 from engine_inputs import STAND_IN, run_all, traced, write_assessment
 
 
