@@ -2,7 +2,8 @@
 
     python tests/benchmarks/correct.py [--pixels N] [--years Y] [--skip-job] [--json]
 
-One thread; times are processor time, so that other work on the machine counts less. The reference has 30 years of days, the simulation 30 and Y more (90 by default).
+One thread; times are processor time, so that other work on the machine counts less. The reference
+has 30 years of days, the simulation 30 and Y more (90 by default).
 The kernel (quantile-delta, additive, default windows) is compared with `np.argsort` of the same
 values along time, and, on a few pixels, with a plain NumPy formulation of the same method that
 sorts every window. The job corrects tasmin, tasmax and pr with everything it writes; the copy
