@@ -227,3 +227,10 @@ def test_no_correction_passes_values_through() -> None:
     found = corrected(setup, o, f)
     for name, values in found.values.items():
         np.testing.assert_array_equal(values, f[name])
+
+
+def test_the_pair_has_one_set_of_choices() -> None:
+    different = {"variables": {"tasmax": {"method": "none"}}}
+    with pytest.raises(ValueError, match="tasmin and tasmax need the same choices"):
+        Correct.model_validate(different)
+    assert Correct.model_validate(different | {"temperature_pair": "separate"})

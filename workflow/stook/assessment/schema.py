@@ -170,6 +170,11 @@ class Correct(Section):
     def _valid_overrides(self) -> Correct:
         for variable in self.variables:
             self.choice(variable)
+        paired = self.temperature_pair == "mean-and-range"
+        if paired and self.choice("tasmin") != self.choice("tasmax"):
+            raise ValueError(
+                "tasmin and tasmax need the same choices, unless temperature_pair is separate"
+            )
         return self
 
     def choice(self, variable: str) -> VariableCorrection:
