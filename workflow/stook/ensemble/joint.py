@@ -96,7 +96,8 @@ def joint_regions(runs: Sequence[RunSummary], models: Models) -> pd.DataFrame:
     ]
     stacks = [(run.flags[units], run.years, run.windows) for run in runs]
     names = {"of": "regions", "crop": first.crop, "region": TOTAL}
-    return _table(stacks, models, names | {"scenario": first.simulation.scenario})
+    rows = _rows(stacks, models, names | {"scenario": first.simulation.scenario})
+    return stacked_rows(rows, JOINT)
 
 
 def joint_crops(by_crop: Sequence[Sequence[RunSummary]], models: Models) -> pd.DataFrame:
@@ -107,7 +108,7 @@ def joint_crops(by_crop: Sequence[Sequence[RunSummary]], models: Models) -> pd.D
     by_crop
         For every crop, the runs of the scenario, in the same order.
     """
-    parts = []
+    rows: list[dict[str, object]] = []
     for region in by_crop[0][0].regions:
         grown = [
             runs
@@ -127,20 +128,20 @@ def joint_crops(by_crop: Sequence[Sequence[RunSummary]], models: Models) -> pd.D
             stacks.append((flags, years, together[0].windows))
         names = {"of": "crops", "crop": ALL_CROPS, "region": region}
         names["scenario"] = by_crop[0][0].simulation.scenario
-        parts.append(_table(stacks, models, names))
-    return pd.concat(parts, ignore_index=True) if parts else stacked_rows([], JOINT)
+        rows += _rows(stacks, models, names)
+    return stacked_rows(rows, JOINT)
 
 
-def _table(
+def _rows(
     stacks: Sequence[tuple[np.ndarray, np.ndarray, Mapping[str, Years]]],
     models: Models,
     names: dict[str, str],
-) -> pd.DataFrame:
+) -> list[dict[str, object]]:
     """Return the rows of units whose flags are (unit, reference, year), a stack per simulation."""
     rows: list[dict[str, object]] = []
     units = len(stacks[0][0])
     if units < 2:
-        return stacked_rows(rows, JOINT)
+        return rows
     for period in dict.fromkeys(name for _, _, windows in stacks for name in windows):
         for number, reference in enumerate(REFERENCES):
             observed, independent, years = [], [], []
@@ -164,7 +165,7 @@ def _table(
                 ratio = share / chance if chance > 0 else np.nan
                 numbers = {"at_least": k, "share": share, "independent": chance, "ratio": ratio}
                 rows.append({**own, **counted, **numbers})
-    return stacked_rows(rows, JOINT)
+    return rows
 
 
 def _mean(values: Sequence[np.ndarray], weights: np.ndarray, k: int) -> float:
