@@ -165,7 +165,7 @@ def rank_in_windows(values, packed, count, plan, counts, ranks):
                 break
             end += 1
         if end == i + 1:
-            cell = plan.cell[place]
+            cell = np.uint32(plan.cell[place])
             ranks[place] = 2 * _read(counts, plan, cell) + 2
             _raise(counts, plan, cell)
         else:
@@ -183,10 +183,15 @@ def rank_in_windows(values, packed, count, plan, counts, ranks):
 @njit(cache=True, nogil=True, inline="always")
 def _read(counts, plan, cell):
     at = np.uint64(plan.cells[cell, 4])
+    blocks = plan.cells[cell, 6]
+    stride = np.uint64(plan.stride)
     total = counts[at]
-    for _ in range(1, plan.cells[cell, 6]):
-        at += np.uint64(plan.stride)
-        total += counts[at]
+    if blocks > 1:  # most often three: written out, faster than a loop
+        total += counts[at + stride]
+    if blocks > 2:
+        total += counts[at + stride + stride]
+    for block in range(3, blocks):
+        total += counts[at + np.uint64(block) * stride]
     return total
 
 
@@ -201,9 +206,10 @@ def _raise(counts, plan, cell):
 
 @njit(cache=True, nogil=True, inline="always")
 def _raise_from(counts, lanes, start, number):
-    for group in range(0, lanes, LANES):
-        for lane in range(LANES):
-            counts[start + np.uint64(group + lane)] += np.int32(group + lane < number)
+    for lane in range(LANES):
+        counts[start + np.uint64(lane)] += np.int32(lane < number)
+    for lane in range(LANES, lanes):
+        counts[start + np.uint64(lane)] += np.int32(lane < number)
 
 
 @njit(cache=True, nogil=True)
