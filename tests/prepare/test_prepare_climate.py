@@ -176,6 +176,13 @@ def test_common_time(tmp_path: Path) -> None:
         )
 
 
+def test_a_record_gives_the_part_of_the_span_it_has(tmp_path: Path) -> None:
+    with opened(tmp_path, "tas", "2001-01-01", 730) as tas:
+        assert common_steps([tas], (2002, 2100), whole=False) == [slice(365, 730)]
+        with pytest.raises(InputError, match="not the whole of periods"):
+            common_steps([tas], (2050, 2100), whole=False)
+
+
 def test_span_in_the_calendar_of_360_days(tmp_path: Path) -> None:
     with opened(tmp_path, "tas", "2001-01-01", 720, "360_day") as tas:
         assert common_steps([tas], (2001, 2002)) == [slice(0, 720)]

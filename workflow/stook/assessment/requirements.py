@@ -132,9 +132,9 @@ def _periods(
     wanted = {"periods.baseline": assessment.periods.baseline}
     if assessment.correct.calibration:
         wanted["correct.calibration"] = assessment.correct.calibration
-    if assessment.periods.span:
-        wanted["periods.span"] = assessment.periods.span
     if name != OBSERVED:
+        if assessment.periods.span:
+            wanted["periods.span"] = assessment.periods.span
         for horizon, years in assessment.periods.horizons.items():
             wanted[f"periods.horizons.{horizon}"] = years
     alike: dict[tuple[int, int], list[SeriesFacts]] = {}

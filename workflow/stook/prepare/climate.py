@@ -65,7 +65,9 @@ def variable_attributes(variable: str, step: str) -> dict[str, str]:
     return attributes
 
 
-def common_steps(series: Sequence[Series], span: tuple[int, int] | None) -> list[slice]:
+def common_steps(
+    series: Sequence[Series], span: tuple[int, int] | None, whole: bool = True
+) -> list[slice]:
     """Return, for each of several series, its steps within the time common to all.
 
     Parameters
@@ -74,11 +76,14 @@ def common_steps(series: Sequence[Series], span: tuple[int, int] | None) -> list
         Variables of one simulation.
     span
         First and last year wanted; None for all years.
+    whole
+        Whether every variable must cover the whole span; else what there is of it is taken.
 
     Raises
     ------
     InputError
-        If calendars or time steps differ, there is no common time, or the span is not covered.
+        If calendars or time steps differ, there is no common time, or the span is not covered
+        (without `whole`: not even in part).
     """
     first = series[0]
     for other in series[1:]:
@@ -98,9 +103,11 @@ def common_steps(series: Sequence[Series], span: tuple[int, int] | None) -> list
         )
         raise InputError(f"{first.files[0].path}: variables share no time: {periods}")
     if span is not None:
-        for one in series:
-            _check_span(one, span)
         inside = first.numbers[(first.years >= span[0]) & (first.years <= span[1])]
+        inside = inside[(inside >= low) & (inside <= high)]
+        for one in series:
+            if whole or inside.size == 0:
+                _check_span(one, span)
         low, high = int(inside[0]), int(inside[-1])
     return [slice(low - int(one.numbers[0]), high + 1 - int(one.numbers[0])) for one in series]
 

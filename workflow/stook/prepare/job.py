@@ -11,6 +11,7 @@ from stook.assessment.schema import Assessment, Layer
 from stook.assessment.simulations import find_simulation
 from stook.assessment.variables import series_variables
 from stook.audit.ledger import Job
+from stook.constants import OBSERVED
 from stook.errors import InputError
 from stook.grids.analysis import AnalysisGrid, analysis_grid, tile_count
 from stook.grids.files import open_result
@@ -68,7 +69,7 @@ def tile(assessment: Assessment, simulation: str, tile: str) -> None:
             stack.enter_context(open_series(found.files[variable], variable))
             for variable in variables
         ]
-        steps = common_steps(series, assessment.periods.span)
+        steps = common_steps(series, assessment.periods.span, whole=simulation != OBSERVED)
         block_mb = assessment.store.block_mb
         dataset = xr.Dataset(
             {
