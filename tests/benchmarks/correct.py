@@ -72,20 +72,19 @@ def invented(axis: Series, count: int, warm: float) -> dict[str, np.ndarray]:
 def plain_quantile_delta(
     o: np.ndarray, h: np.ndarray, f: np.ndarray, axes: tuple[Series, Series, Series]
 ) -> np.ndarray:
-    """Correct one pixel, window by window, in plain NumPy."""
+    """Correct one pixel, window by window, in plain NumPy (whole decades from the first year)."""
     steps = 73
     result = np.empty(len(f))
     first = int(axes[2].year[0])
-    years = range(first, int(axes[2].year[-1]) + 1)
+    last = int(axes[2].year[-1])
     own = np.floor(axes[2].position * steps).astype(int)
     for window in range(steps):
         inside = []
         for axis in axes:
             away = (axis.position * 365 - (window * 5 + 2.5) + 182.5) % 365 - 182.5
             inside.append((away >= -15.5) & (away < 15.5))
-        for block in range(first, years[-1] + 1, 10):
-            start = max(min(block - 10, years[-1] - 29), first)
-            chosen = (axes[2].year >= start) & (axes[2].year < start + 30) & inside[2]
+        for block in range(first, last + 1, 10):
+            chosen = (axes[2].year >= block - 10) & (axes[2].year < block + 20) & inside[2]
             mine = (own == window) & (axes[2].year >= block) & (axes[2].year < block + 10)
             ordered = np.sort(f[chosen])
             below, upto = (np.searchsorted(ordered, f[mine], side) for side in ("left", "right"))
