@@ -115,11 +115,15 @@ def serve(listener: socket.socket) -> None:
 
 
 def _load() -> None:
-    """Import what the jobs import."""
+    """Import what the jobs import, and make one compiled call, which loads Numba's tables."""
     import importlib
 
-    from stook.assessment.layout import STAGES
+    import numpy as np
 
+    from stook.assessment.layout import STAGES
+    from stook.randomness import mix
+
+    mix(np.uint64(0), np.uint64(0))
     for name in ("stook.audit.ledger", *(f"stook.{stage}.job" for stage in STAGES)):
         importlib.import_module(name)
 
