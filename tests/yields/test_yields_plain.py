@@ -47,7 +47,16 @@ def terms() -> st.SearchStrategy[dict[str, Any]]:
         )
         return st.one_of(linear, quadratic, piecewise)
 
-    one = st.sampled_from(list(SCALE)).flatmap(of)
+    product = st.builds(
+        lambda pair, c: {
+            "form": "product",
+            "indices": list(pair),
+            "coefficient": c / (SCALE[pair[0]] * SCALE[pair[1]]),
+        },
+        st.permutations(list(SCALE)).map(lambda names: names[:2]),
+        size,
+    )
+    one = st.one_of(st.sampled_from(list(SCALE)).flatmap(of), product)
     return st.lists(one, min_size=1, max_size=4).map(
         lambda given_: {f"term{n}": term for n, term in enumerate(given_)}
     )

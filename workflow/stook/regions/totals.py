@@ -159,8 +159,7 @@ def system_totals(
         weights[:, reason != 0] = 0.0
         if not weights.any():
             continue
-        needed = [term.index for term in response.terms.values()]
-        season = grids.season[list(dict.fromkeys(needed))].isel(lat=rows).load()
+        season = grids.season[response.used_indices].isel(lat=rows).load()
         design = design_matrix(response, season)[used]
         valid = np.isfinite(design).all(axis=2)
         sums.add(design, valid, layer["baseline_yield"].values.ravel()[used], weights)

@@ -153,12 +153,12 @@ def response_texts(responses: Responses) -> list[ResponseText]:
 def _response_text(crop: str, system: str, response: Response) -> ResponseText:
     terms = []
     for name, term in response.terms.items():
-        index = response.indices[term.index]
+        indices = " times ".join(describe(response.indices[index]) for index in term.used)
         knots = ""
         if isinstance(term, PiecewiseLinear):
             knots = f" (knots {', '.join(f'{knot:g}' for knot in term.knots)})"
         values = ", ".join(f"{value:.4g}" for value in term.coefficients)
-        terms.append(f"{name}: {term.form}{knots} in {describe(index)}; coefficients {values}")
+        terms.append(f"{name}: {term.form}{knots} in {indices}; coefficients {values}")
     ranges = [
         f"{describe(response.indices[name])}: {low:g} to {high:g} {unit_of(response.indices[name])}"
         for name, (low, high) in response.estimation_range.items()

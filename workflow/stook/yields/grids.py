@@ -11,7 +11,7 @@ from stook.grids.missing import Reason, reason_attributes
 from stook.season.definition import YEAR_ATTRIBUTES
 from stook.yields.kernels import TERMS_AT_ONCE, padded, term_effects, yield_ratios
 from stook.yields.response import Response
-from stook.yields.response_terms import term_columns, term_slices
+from stook.yields.response_terms import response_columns, term_slices
 
 BASELINE_SHARE = 2 / 3
 """Least share of the baseline years that need a value (a choice of this program)."""
@@ -64,7 +64,7 @@ def yield_grids(
     inside = (years >= baseline[0]) & (years <= baseline[1])
     fewest = int(np.ceil(BASELINE_SHARE * (baseline[1] - baseline[0] + 1)))
     model = _Model(response, np.asarray(coefficients, dtype=np.float64), inside, fewest)
-    names = used_indices(response)
+    names = response.used_indices
     grids = [indices[name] for name in names]
     layers = [baseline_yield, reason, indices["reason"]]
     if grids[0].chunks:
@@ -92,25 +92,18 @@ def yield_grids(
     return dataset.assign_coords(year=("year", years, YEAR_ATTRIBUTES))
 
 
-def used_indices(response: Response) -> list[str]:
-    """Return the indices that some term uses, in document order."""
-    used = {term.index for term in response.terms.values()}
-    return [name for name in response.indices if name in used]
-
-
 def _block(*arrays: np.ndarray, model: _Model) -> tuple[np.ndarray, ...]:
     """Return ratio, yield, effects, flags (lat, lon, year) and reason (lat, lon) of a block."""
     shape = arrays[0].shape
     baseline_yield, reason, season_reason = (one.ravel() for one in arrays[:3])
-    names = used_indices(model.response)
+    names = model.response.used_indices
     years = len(model.baseline)
     there = np.flatnonzero(reason == int(Reason.VALID))
     index = {
         name: np.ascontiguousarray(grid.reshape(-1, years)[there], dtype=np.float64)
         for name, grid in zip(names, arrays[3:], strict=True)
     }
-    terms = model.response.terms.values()
-    design = np.stack([c for term in terms for c in term_columns(term, index[term.index])], -1)
+    design = np.stack(response_columns(model.response, index), -1)
     valid = np.isfinite(design).all(axis=-1)
     ratio, found = _ratios(model, design, valid)
     found = np.where(valid.any(axis=1) | (season_reason[there] == 0), found, season_reason[there])
@@ -184,8 +177,9 @@ def _attributes(response: Response) -> dict[str, dict[str, object]]:
         },
     }
     for name, term in response.terms.items():
+        indices = " and ".join(term.used)
         attributes[f"effect_{name}"] = {
-            "long_name": f"effect of {term.index} ({term.form}) against its baseline mean",
+            "long_name": f"effect of {indices} ({term.form}) against its baseline mean",
             "units": unit,
             "comment": what,
         }

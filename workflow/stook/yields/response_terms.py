@@ -2,22 +2,34 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from itertools import pairwise
 
 import numpy as np
 import xarray as xr
 
-from stook.yields.response import PiecewiseLinear, Quadratic, Response, Term
+from stook.yields.response import PiecewiseLinear, Product, Quadratic, Response, Term
 
 
-def term_columns(term: Term, index: np.ndarray) -> list[np.ndarray]:
-    """Return the design columns of one term, one per coefficient, each shaped like `index`.
+def term_columns(term: Term, series: Mapping[str, np.ndarray]) -> list[np.ndarray]:
+    """Return the design columns of one term, one per coefficient, each shaped like an index.
 
     Linear: x. Quadratic: x and its square. Piecewise linear: the part of x in each segment, the
     first counted from zero, so that the line is continuous and passes through the origin:
-    min(x, k1), then x clipped to k1..k2 less k1, and so on, last max(x - kn, 0). A missing index
-    is missing in every column.
+    min(x, k1), then x clipped to k1..k2 less k1, and so on, last max(x - kn, 0). Product: x y. A
+    missing index is missing in every column.
+
+    Parameters
+    ----------
+    term
+        The term.
+    series
+        Values by index, of one shape.
     """
+    if isinstance(term, Product):
+        one, other = (series[name] for name in term.indices)
+        return [one * other]
+    index = series[term.index]
     match term:
         case PiecewiseLinear(knots=knots):
             inner = [np.clip(index, low, high) - low for low, high in pairwise(knots)]
@@ -27,6 +39,11 @@ def term_columns(term: Term, index: np.ndarray) -> list[np.ndarray]:
             return [index, index * index]
         case _:
             return [index]
+
+
+def response_columns(response: Response, series: Mapping[str, np.ndarray]) -> list[np.ndarray]:
+    """Return the design columns of all terms, in document order; see `term_columns`."""
+    return [column for term in response.terms.values() for column in term_columns(term, series)]
 
 
 def term_slices(response: Response) -> dict[str, slice]:
@@ -56,13 +73,7 @@ def design_matrix(response: Response, indices: xr.Dataset) -> np.ndarray:
         longitude, as `DataArray.stack` of (lat, lon) gives. NaN where an index is missing.
     """
     series: dict[str, np.ndarray] = {}
-    for term in response.terms.values():
-        if term.index not in series:
-            grid = indices[term.index].transpose("lat", "lon", "year").values
-            series[term.index] = grid.astype(np.float64).reshape(-1, grid.shape[-1])
-    columns = [
-        column
-        for term in response.terms.values()
-        for column in term_columns(term, series[term.index])
-    ]
-    return np.stack(columns, axis=-1)
+    for name in response.used_indices:
+        grid = indices[name].transpose("lat", "lon", "year").values
+        series[name] = grid.astype(np.float64).reshape(-1, grid.shape[-1])
+    return np.stack(response_columns(response, series), axis=-1)

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from stook.randomness import generator
-from stook.yields.response import Linear, Quadratic, Response, Term
+from stook.yields.response import Linear, Product, Quadratic, Response, Term
 
 
 @dataclass(frozen=True)
@@ -59,7 +59,7 @@ def yields_of_pixel(
     baseline_yield
         t/ha.
     """
-    used = [name for name in response.indices if any(t.index == name for t in terms_of(response))]
+    used = [name for name in response.indices if any(name in t.used for t in terms_of(response))]
     years = [
         year
         for year in indices[used[0]]
@@ -69,7 +69,10 @@ def yields_of_pixel(
     left = list(coefficients)
     for name, term in response.terms.items():
         own = [left.pop(0) for _ in term.coefficients]
-        parts[name] = {year: term_value(term, own, indices[term.index][year]) for year in years}
+        parts[name] = {
+            year: term_value(term, own, *(indices[index][year] for index in term.used))
+            for year in years
+        }
     level: dict[int, float] = {}
     for year in years:
         h = response.intercept + sum(part[year] for part in parts.values())
@@ -97,8 +100,10 @@ def terms_of(response: Response) -> list[Term]:
     return list(response.terms.values())
 
 
-def term_value(term: Term, coefficients: Sequence[float], x: float) -> float:
-    """Return one term of the predictor at an index value."""
+def term_value(term: Term, coefficients: Sequence[float], x: float, y: float = math.nan) -> float:
+    """Return one term of the predictor at an index value, or at two for a product."""
+    if isinstance(term, Product):
+        return coefficients[0] * x * y
     if isinstance(term, Linear):
         return coefficients[0] * x
     if isinstance(term, Quadratic):
