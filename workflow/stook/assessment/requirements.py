@@ -22,11 +22,12 @@ from stook.season.definition import (
     DegreeDays,
     DrySpell,
     IndexDefinition,
+    LargestTotal,
     WetDays,
     needed_variables,
 )
 
-DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays)
+DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays, LargestTotal)
 """Indices that cannot be taken from monthly or annual means."""
 
 
