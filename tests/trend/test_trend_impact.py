@@ -123,9 +123,10 @@ def test_kernels_by_hand() -> None:
     rise=st.floats(-0.6, 0.6),
     missing=st.integers(0, 3),
     product=st.booleans(),
+    extrapolation=st.sampled_from(["flag", "hold"]),
 )
 def test_same_as_the_plain_path(
-    seed: int, system: str, rise: float, missing: int, product: bool
+    seed: int, system: str, rise: float, missing: int, product: bool, extrapolation: str
 ) -> None:
     random = np.random.default_rng(seed)
     years = np.arange(1971, 2016)
@@ -135,7 +136,8 @@ def test_same_as_the_plain_path(
         "night": 15 + 0.6 * random.standard_normal(45),
     }
     indices["rain"][random.choice(45, missing, replace=False)] = np.nan
-    content = response(system)
+    content = response(system) | {"extrapolation": extrapolation}
+    content["estimation_range"] |= {"heat": [40, 80], "rain": [300, 500]}
     if product:
         content["terms"]["both"] = {
             "form": "product",

@@ -98,6 +98,26 @@ def test_same_as_plain_loops_with_a_product(link: str) -> None:
     assert not np.allclose(case.totals(), Case(link, shape=(2, 3)).totals(), rtol=1e-3)
 
 
+@pytest.mark.parametrize("link", ["log", "level"])
+def test_same_as_plain_loops_with_marginal_effects_held(link: str) -> None:
+    case = Case(link, shape=(2, 3), model=with_product(link, extrapolation="hold"))
+    draws = range(0, 41, 8)
+    np.testing.assert_allclose(case.totals()[list(draws)], case.plain(draws), rtol=1e-12)
+    flag = Case(link, shape=(2, 3), model=with_product(link))
+    assert not np.allclose(case.totals(), flag.totals(), rtol=1e-4)
+
+
+def test_inside_the_range_held_draws_are_the_same_bits() -> None:
+    totals = []
+    for extrapolation in ("flag", "hold"):
+        model = with_product(extrapolation=extrapolation)
+        case = Case(model=model)
+        inside = {n: case.indices[n].clip(*model.estimation_range[n]) for n in model.indices}
+        case.design = design_matrix(model, case.indices.assign(inside))
+        totals.append(case.totals())
+    assert np.array_equal(*totals)
+
+
 def test_percentiles_over_draws_are_those_of_a_plain_loop() -> None:
     case = Case(shape=(2, 3))
     found = np.percentile(case.totals()[1:], [5, 17, 50, 83, 95], axis=0)

@@ -110,6 +110,21 @@ def test_flags_say_which_index_is_outside_its_range() -> None:
     assert found.attrs["flag_meanings"] == "growth_outside heat_outside rain_outside"
 
 
+def test_held_marginal_effects_by_hand() -> None:
+    """Rain beyond 700 mm: slope 0.0012 - 2e-6 x 700 = -0.0002 a mm; the flags stay."""
+    indices = one_pixel([1500.0] * 5, [0.0] * 5, [700, 700, 700, 800, 600])
+    flag, hold = (
+        grids(indices, response(extrapolation=how)).isel(lat=0, lon=0) for how in ("flag", "hold")
+    )
+    np.testing.assert_allclose(hold["effect_rain"], [0, 0, 0, -0.02, 0.01], atol=1e-15)
+    np.testing.assert_allclose(flag["effect_rain"], [0, 0, 0, -0.03, 0.01], atol=1e-15)
+    np.testing.assert_array_equal(hold["extrapolated"], flag["extrapolated"])
+    assert "held" in hold["extrapolated"].attrs["comment"]
+    for name in ("yield_ratio", "yield", *(f"effect_{term}" for term in response().terms)):
+        inside = [0, 1, 2, 4]
+        assert flag[name].values[inside].tobytes() == hold[name].values[inside].tobytes()
+
+
 def test_an_index_no_term_uses_is_neither_needed_nor_flagged() -> None:
     content = response().model_dump()
     model = Response.model_validate(

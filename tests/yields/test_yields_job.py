@@ -14,6 +14,8 @@ from stook.assessment.layout import Layout
 from stook.assessment.load import load_assessment
 from stook.assessment.schema import Assessment
 from stook.audit.ledger import Job, read_record
+from stook.engine.fingerprints import Job as Planned
+from stook.engine.fingerprints import fingerprint
 from stook.errors import ResultsError
 from stook.grids.analysis import analysis_grid, tile_count
 from stook.grids.files import open_result, read_table
@@ -181,6 +183,30 @@ def test_a_region_alone_gives_the_same_bits(
     expected = whole[1].isel(lon=slice(0, 5))
     for name in expected.variables:
         np.testing.assert_array_equal(result[name], expected[name], strict=True)
+
+
+def test_the_system_of_the_assessment_overrides_the_document(tmp_path: Path) -> None:
+    assessment = write_inputs(tmp_path)
+    flag = run(assessment)
+    job = Planned(assessment, {"simulation": SIMULATION, "crop": "maize", "system": "rainfed"}, ())
+    before = {rule: fingerprint(rule, job) for rule in ("yields_grid", "regions_totals")}
+    content = yaml.safe_load(assessment.source.read_text(encoding="utf-8"))
+    content["crops"]["maize"]["systems"]["rainfed"]["extrapolation"] = "hold"
+    assessment.source.write_text(yaml.safe_dump(content), encoding="utf-8")
+    changed = load_assessment(assessment.source)
+    hold = run(changed)
+    np.testing.assert_array_equal(hold["extrapolated"], flag["extrapolated"])
+    base = flag["year"].values <= 2010
+    untouched = ((flag["extrapolated"] == 0) | ~base[:, None, None]).all("year").values
+    outside = (flag["extrapolated"] != 0).values
+    assert (hold["effect_rain"].values != flag["effect_rain"].values)[outside].any()
+    same = ~outside & untouched
+    assert same.any()
+    np.testing.assert_array_equal(hold["yield"].values[same], flag["yield"].values[same])
+    now = Planned(changed, job.wildcards, ())
+    for rule, digests in before.items():
+        (one,) = set(digests) - set(fingerprint(rule, now))
+        assert one.startswith("extrapolation:")
 
 
 def test_coefficients_of_another_response_are_refused(tmp_path: Path) -> None:

@@ -69,15 +69,22 @@ def terms() -> st.SearchStrategy[dict[str, Any]]:
     intercept=st.sampled_from([0.0, 1.0, 4.0]),
     missing=st.lists(st.integers(0, len(YEARS) - 1), max_size=6),
     seed=st.integers(0, 99),
+    extrapolation=st.sampled_from(["flag", "hold"]),
 )
 def test_same_as_the_plain_path(
-    link: str, wanted: dict[str, Any], intercept: float, missing: list[int], seed: int
+    link: str,
+    wanted: dict[str, Any],
+    intercept: float,
+    missing: list[int],
+    seed: int,
+    extrapolation: str,
 ) -> None:
     count = sum(len(term.get("coefficients", [0])) for term in wanted.values())
     changes = {
         "link": link,
         "intercept": intercept,
         "terms": wanted,
+        "extrapolation": extrapolation,
         "standard_errors": [0.1] * count,
     }
     model = Response.model_validate(COMMON | changes)

@@ -234,6 +234,9 @@ class WaterSystem(Section):
     indices: dict[str, IndexDefinition] = Field(
         default_factory=dict, description="indices wanted besides those of the response"
     )
+    extrapolation: Literal["flag", "hold"] | None = Field(
+        None, description="overrides that of the response document"
+    )
 
     @model_validator(mode="after")
     def _valid_phases(self) -> WaterSystem:

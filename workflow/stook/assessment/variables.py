@@ -10,8 +10,12 @@ from stook.yields.response import Response, load_response
 
 
 def system_response(assessment: Assessment, crop: str, system: str) -> Response:
-    """Return the response document of one crop x water system."""
-    return load_response(assessment.path(assessment.system(crop, system).response))
+    """Return the response of one crop x water system: its document, as the assessment uses it."""
+    spec = assessment.system(crop, system)
+    response = load_response(assessment.path(spec.response))
+    if spec.extrapolation is None:
+        return response
+    return response.model_copy(update={"extrapolation": spec.extrapolation})
 
 
 def system_indices(assessment: Assessment, crop: str, system: str) -> dict[str, IndexDefinition]:

@@ -61,6 +61,12 @@ def _calibration(job: Job) -> Any:
     return job.assessment.correct.calibration or job.assessment.periods.baseline
 
 
+def _extrapolation(job: Job) -> Any:
+    systems = job.assessment.crops[job.wildcards["crop"]].systems
+    own = job.wildcards.get("system")
+    return {name: spec.extrapolation for name, spec in systems.items() if own in (None, name)}
+
+
 def _grid(job: Job) -> Any:
     return job.assessment.grid.model_dump(mode="json", exclude={"tiles"})
 
@@ -80,6 +86,7 @@ SECTIONS: dict[str, Callable[[Job], Any]] = {
     "ensemble": lambda job: job.assessment.ensemble.model_dump(mode="json", exclude={"draws"}),
     "levels": _levels,
     "supply": lambda job: _plain(job.assessment.supply),
+    "extrapolation": _extrapolation,
     "grid": _grid,
     "horizons": lambda job: job.assessment.periods.horizons,
     "indices": _indices,
@@ -104,16 +111,16 @@ RULES: dict[str, tuple[str, ...]] = {
     "correct_summary": (),
     "season_tile": ("indices", "phases"),
     "yields_coefficients": ("draws", "seed"),
-    "yields_grid": ("baseline",),
-    "regions_totals": ("baseline",),
+    "yields_grid": ("baseline", "extrapolation"),
+    "regions_totals": ("baseline", "extrapolation"),
     "ensemble_changes": ("baseline", "horizons", "weights"),
     "ensemble_pixels": ("baseline", "horizons", "weights"),
     "ensemble_risk": ("baseline", "horizons", "ensemble", "supply"),
     "ensemble_robustness": ("baseline", "horizons", "weights", "levels"),
     "trend_pixels": ("trend", "seed"),
     "trend_regions": ("trend", "seed", "baseline"),
-    "trend_impact": ("trend", "seed", "baseline"),
-    "trend_impact_map": ("trend", "seed", "baseline"),
+    "trend_impact": ("trend", "seed", "baseline", "extrapolation"),
+    "trend_impact_map": ("trend", "seed", "baseline", "extrapolation"),
     "report_page": ("assessment",),
 }
 """The sections each rule depends on. What arrives through an input file is not repeated here."""

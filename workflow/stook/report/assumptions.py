@@ -164,6 +164,11 @@ def _response_text(crop: str, system: str, response: Response) -> ResponseText:
         for name, (low, high) in response.estimation_range.items()
         if name in response.indices
     ]
+    beyond = {
+        "flag": "beyond these ranges the terms are followed as they are",
+        "hold": "beyond these ranges the marginal effect of each index is held at the edge",
+    }[response.extrapolation]
+    ranges.append(beyond)
     link = {
         "log": "log: terms add up to the logarithm of yield",
         "level": "level: terms add up to yield, t/ha",

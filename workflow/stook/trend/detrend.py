@@ -14,7 +14,7 @@ from stook.season.definition import IndexDefinition, Mean
 from stook.trend import kernels
 from stook.trend.impact_kernels import logarithmic_mean
 from stook.trend.series import TrendOptions, same_years
-from stook.yields.response import Product, Response, Term
+from stook.yields.response import Product, Ranges, Response, Term
 from stook.yields.response_terms import response_columns, term_columns, term_slices
 
 
@@ -112,7 +112,10 @@ def detrend(
 
 
 def index_changes(
-    term: Term, actual: Mapping[str, np.ndarray], detrended: Mapping[str, np.ndarray]
+    term: Term,
+    actual: Mapping[str, np.ndarray],
+    detrended: Mapping[str, np.ndarray],
+    held: Ranges | None,
 ) -> dict[str, list[np.ndarray]]:
     """Return what each index of a term does to its design columns, actual less detrended.
 
@@ -121,14 +124,14 @@ def index_changes(
     Econ. Inequal. 11, 99-126). The parts add up to the change of the column.
     """
     if not isinstance(term, Product):
-        pair = term_columns(term, actual), term_columns(term, detrended)
+        pair = (term_columns(term, side, held) for side in (actual, detrended))
         return {term.index: [one - other for one, other in zip(*pair, strict=True)]}
     parts = {}
     for own, other in (term.indices, term.indices[::-1]):
         changed = []
         for side in (actual, detrended):
-            after = term_columns(term, {own: actual[own], other: side[other]})
-            before = term_columns(term, {own: detrended[own], other: side[other]})
+            after = term_columns(term, {own: actual[own], other: side[other]}, held)
+            before = term_columns(term, {own: detrended[own], other: side[other]}, held)
             changed.append(after[0] - before[0])
         parts[own] = [0.5 * (changed[0] + changed[1])]
     return parts
@@ -170,7 +173,7 @@ def impact_series(response: Response, coefficients: np.ndarray, weather: Weather
     slices = term_slices(response)
     for name, term in response.terms.items():
         own = coefficients[slices[name]]
-        for index, columns in index_changes(term, *sides).items():
+        for index, columns in index_changes(term, *sides, response.held).items():
             for coefficient, column in zip(own, columns, strict=True):
                 changes[index] += coefficient * weather.trends(column / scale)
     result = np.zeros(shape)

@@ -187,6 +187,10 @@ def _attributes(response: Response) -> dict[str, dict[str, object]]:
     names = list(response.indices)
     attributes["extrapolated"] = {
         "long_name": "indices outside their estimation range",
+        "comment": {
+            "flag": "the response is followed beyond the range",
+            "hold": "marginal effects are held beyond the range",
+        }[response.extrapolation],
         "flag_masks": np.array([1 << bit for bit in range(len(names))], dtype=kind),
         "flag_meanings": " ".join(f"{name}_outside" for name in names),
     }

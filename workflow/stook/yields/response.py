@@ -7,6 +7,7 @@ carries the definition of every index it uses, since a coefficient means nothing
 from __future__ import annotations
 
 import re
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -14,6 +15,12 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 from stook.season.definition import IndexDefinition
+
+Extrapolation = Literal["flag", "hold"]
+"""Beyond the estimation range: follow the response as it is, or hold its marginal effects."""
+
+Ranges = Mapping[str, tuple[float, float]]
+"""Lowest and highest value by index."""
 
 
 class _Strict(BaseModel):
@@ -121,6 +128,11 @@ class Response(_Strict):
     estimation_range: dict[str, tuple[float, float]] = Field(
         description="lowest and highest value of each index in the data it was estimated from"
     )
+    extrapolation: Extrapolation = Field(
+        "flag",
+        description="beyond that range: flag follows the terms, hold keeps their marginal effect "
+        "at its edge; flagged both ways",
+    )
     citation: str = Field(description="where the response is published")
     note: str = Field(description="where the numbers come from")
 
@@ -167,6 +179,11 @@ class Response(_Strict):
         """The indices that some term uses, in document order."""
         used = {index for term in self.terms.values() for index in term.used}
         return [name for name in self.indices if name in used]
+
+    @property
+    def held(self) -> Ranges | None:
+        """The ranges beyond which marginal effects are held; None if they are not."""
+        return self.estimation_range if self.extrapolation == "hold" else None
 
     @property
     def coefficient_vector(self) -> np.ndarray:

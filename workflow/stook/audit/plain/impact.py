@@ -10,7 +10,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from stook.yields.response import Response, Term
+from stook.audit.plain.yields import term_value
+from stook.yields.response import Response
 
 
 @dataclass(frozen=True)
@@ -104,9 +105,9 @@ def _predictor(
 ) -> float:
     total, place = response.intercept, 0
     for term in response.terms.values():
-        own = coefficients[place : place + len(term.coefficients)]
+        own = coefficients[place : place + len(term.coefficients)].tolist()
         place += len(term.coefficients)
-        total += _term(term, own, [indices[name][t] for name in term.used])
+        total += term_value(response, term, own, [indices[name][t] for name in term.used])
     return total
 
 
@@ -121,7 +122,7 @@ def _of_index(
     """Add up what one index alone changes in the terms that use it."""
     total, place = 0.0, 0
     for term in response.terms.values():
-        own = coefficients[place : place + len(term.coefficients)]
+        own = coefficients[place : place + len(term.coefficients)].tolist()
         place += len(term.coefficients)
         if name not in term.used:
             continue
@@ -131,23 +132,8 @@ def _of_index(
                 [(side if index == name else other)[index][t] for index in term.used]
                 for side in (actual, detrended)
             )
-            changes.append(_term(term, own, one) - _term(term, own, two))
+            changes.append(
+                term_value(response, term, own, one) - term_value(response, term, own, two)
+            )
         total += sum(changes) / 2
-    return total
-
-
-def _term(term: Term, own: np.ndarray, values: list[float]) -> float:
-    """Return one term at the values of its index, or indices."""
-    x = values[0]
-    if term.form == "linear":
-        return own[0] * x
-    if term.form == "quadratic":
-        return own[0] * x + own[1] * x**2
-    if term.form == "product":
-        return own[0] * x * values[1]
-    # A broken line through the origin: one slope per segment.
-    total = own[0] * min(x, term.knots[0])
-    for number, knot in enumerate(term.knots):
-        above = term.knots[number + 1] if number + 1 < len(term.knots) else np.inf
-        total += own[number + 1] * max(min(x, above) - knot, 0.0)
     return total

@@ -70,7 +70,7 @@ def yields_of_pixel(
     for name, term in response.terms.items():
         own = [left.pop(0) for _ in term.coefficients]
         parts[name] = {
-            year: term_value(term, own, *(indices[index][year] for index in term.used))
+            year: term_value(response, term, own, [indices[index][year] for index in term.used])
             for year in years
         }
     level: dict[int, float] = {}
@@ -100,10 +100,53 @@ def terms_of(response: Response) -> list[Term]:
     return list(response.terms.values())
 
 
-def term_value(term: Term, coefficients: Sequence[float], x: float, y: float = math.nan) -> float:
-    """Return one term of the predictor at an index value, or at two for a product."""
+def term_value(
+    response: Response, term: Term, coefficients: Sequence[float], values: Sequence[float]
+) -> float:
+    """Return one term of the predictor at the value of its index, or at two for a product.
+
+    Where marginal effects are held, it is the value at the nearest point of the estimation range,
+    and as much for every unit beyond as one unit brings there.
+    """
+    if response.extrapolation == "flag":
+        return _value(term, coefficients, values)
+    ranges = [response.estimation_range[name] for name in term.used]
+    edge = [
+        low if x < low else high if x > high else x
+        for x, (low, high) in zip(values, ranges, strict=True)
+    ]
+    total = _value(term, coefficients, edge)
+    for place, (x, (low, high)) in enumerate(zip(values, ranges, strict=True)):
+        if x != edge[place]:
+            inward = [(low + high) / 2 if at == place else e for at, e in enumerate(edge)]
+            total += (x - edge[place]) * _slope(term, coefficients, edge, inward, place)
+    return total
+
+
+def _slope(
+    term: Term,
+    coefficients: Sequence[float],
+    edge: Sequence[float],
+    inward: Sequence[float],
+    place: int,
+) -> float:
+    """Return the marginal effect of an index at an edge of its range, seen from inside."""
+    if isinstance(term, Linear):
+        return coefficients[0]
+    if isinstance(term, Quadratic):
+        return coefficients[0] + 2 * coefficients[1] * edge[0]
     if isinstance(term, Product):
-        return coefficients[0] * x * y
+        return coefficients[0] * edge[1 - place]
+    between = [k for k in term.knots if min(edge[0], inward[0]) < k < max(edge[0], inward[0])]
+    nearest = min([*between, inward[0]], key=lambda x: abs(x - edge[0]))
+    rise = _value(term, coefficients, edge) - _value(term, coefficients, [nearest])
+    return rise / (edge[0] - nearest)
+
+
+def _value(term: Term, coefficients: Sequence[float], values: Sequence[float]) -> float:
+    x = values[0]
+    if isinstance(term, Product):
+        return coefficients[0] * x * values[1]
     if isinstance(term, Linear):
         return coefficients[0] * x
     if isinstance(term, Quadratic):
