@@ -23,6 +23,7 @@ rule regions_totals:
         seasons=PLAN.seasons,
         coefficients=PLAN.coefficients,
         responses=PLAN.responses,
+        technology=PLAN.technology,
         overlay=LAYOUT.overlay,
         layers=LAYOUT.layers,
     output:

@@ -22,6 +22,7 @@ rule yields_grid:
         seasons=PLAN.seasons,
         coefficients=PLAN.coefficients,
         response=PLAN.response,
+        technology=PLAN.technology,
         layers=LAYOUT.layers,
     output:
         grids=LAYOUT.yields("{simulation}", "{crop}", "{system}"),

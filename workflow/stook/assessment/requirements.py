@@ -26,6 +26,7 @@ from stook.season.definition import (
     WetDays,
     needed_variables,
 )
+from stook.yields.technology import technology_factors
 
 DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays, LargestTotal)
 """Indices that cannot be taken from monthly or annual means."""
@@ -244,9 +245,17 @@ def weight_problems(assessment: Assessment, found: Sequence[Simulation]) -> list
 
 
 def table_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:
-    """Return what is wrong with the tables of global means and of population, if there are any."""
+    """Return what is wrong with the tables of technology, global means and population."""
     problems: list[Problem] = []
     population = assessment.supply.population
+    for spec in assessment.crops.values():
+        ends = [years[1] for years in assessment.periods.horizons.values()]
+        last = assessment.periods.baseline[1]
+        years = np.array([last, *ends, *(assessment.periods.span or ())])
+        try:
+            technology_factors(spec.technology, years, last, assessment.folder)
+        except StookError as error:
+            problems += as_problems(error)
     try:
         level_windows(assessment, [s for s in found if s.name != OBSERVED])
     except StookError as error:

@@ -13,6 +13,7 @@ from typing import Annotated, Any, Literal
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validator
 
 from stook.season.definition import SEASON, IndexDefinition, Variable
+from stook.yields.technology import ConstantTechnology, Technology
 
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9.-]*")
 
@@ -252,6 +253,10 @@ class Crop(Section):
     """One crop with its water systems."""
 
     systems: dict[Name, WaterSystem] = Field(min_length=1, description="by name of the system")
+    technology: Technology = Field(
+        ConstantTechnology(),
+        description="path of yields in an unchanged climate; see docs/yields.md",
+    )
 
     @model_validator(mode="after")
     def _reserved(self) -> Crop:

@@ -15,6 +15,7 @@ from stook.grids.analysis import tile_count
 from stook.grids.files import PIXEL_CHUNK, open_result, read_table
 from stook.regions.overlay import overlay_dataset
 from stook.regions.totals import SystemGrids, Totals, system_totals, totals_table
+from stook.yields.job import technology_files, technology_of
 
 _CHUNKS = {"year": -1, "lat": PIXEL_CHUNK, "lon": -1}
 
@@ -44,10 +45,13 @@ def totals(assessment: Assessment, simulation: str, crop: str) -> None:
         parents += [layout.season(simulation, crop, system, tile) for tile in tiles]
         parents += [layout.yields(simulation, crop, system), layout.coefficients(crop, system)]
         parents.append(assessment.path(assessment.system(crop, system).response))
+    parents += technology_files(assessment, crop)
     wildcards = {"simulation": simulation, "crop": crop}
     with Job(assessment, "regions_totals", parents, wildcards) as job:
         found = {name: _system(assessment, simulation, crop, name) for name in names}
-        job.table(totals_table(found), layout.totals(simulation, crop))
+        years = np.unique(np.concatenate([one.years for one in found.values()]))
+        table = totals_table(found, technology_of(assessment, crop, years))
+        job.table(table, layout.totals(simulation, crop))
 
 
 def _system(assessment: Assessment, simulation: str, crop: str, system: str) -> Totals:

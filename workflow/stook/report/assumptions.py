@@ -9,6 +9,7 @@ from stook.assessment.schema import Assessment, Layer
 from stook.assessment.variables import series_variables
 from stook.season.definition import describe, unit_of
 from stook.yields.response import PiecewiseLinear, Response
+from stook.yields.technology import ConstantTechnology, describe_technology
 
 Responses = Mapping[tuple[str, str], Response]
 _VARIABLES = ("tas", "tasmin", "tasmax", "pr", "rsds", "hurs")
@@ -48,10 +49,7 @@ def general(assessment: Assessment) -> list[tuple[str, str]]:
             "Harvested area",
             "Held at its baseline, pixel by pixel. Production changes with yield alone.",
         ),
-        (
-            "Technology",
-            "Held constant. No breeding, no further inputs, no adaptation by farmers.",
-        ),
+        ("Technology", _technology(assessment)),
         ("CO2", "The effect of rising CO2 on crops is not included."),
         (
             "Crop calendar",
@@ -135,6 +133,22 @@ def crop_inputs(assessment: Assessment) -> list[tuple[str, str, str, str, str]]:
         calendar = f"{_layer(spec.calendar.planting)} to {_layer(spec.calendar.maturity)}"
         rows.append((crop, system, _layer(spec.area), calendar, _layer(spec.baseline_yield)))
     return rows
+
+
+def _technology(assessment: Assessment) -> str:
+    paths = {
+        crop: describe_technology(spec.technology)
+        for crop, spec in assessment.crops.items()
+        if not isinstance(spec.technology, ConstantTechnology)
+    }
+    if not paths:
+        return "Held constant. No breeding, no further inputs, no adaptation by farmers."
+    given = "; ".join(f"{crop}: {path}" for crop, path in paths.items())
+    return (
+        "Changes, shortfalls, trends, and the production and people supplied beside them are at "
+        "the technology of the baseline: what climate alone does. Yields and production by year "
+        f"hold the path given ({given}). No adaptation by farmers to the climate."
+    )
 
 
 def _layer(layer: Layer) -> str:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import pandas as pd
 import xarray as xr
 
 from stook.grids.missing import Reason, reason_attributes
@@ -12,6 +13,7 @@ from stook.season.definition import YEAR_ATTRIBUTES
 from stook.yields.kernels import TERMS_AT_ONCE, padded, term_effects, yield_ratios
 from stook.yields.response import Response
 from stook.yields.response_terms import response_columns, term_slices
+from stook.yields.technology import TECHNOLOGY
 
 BASELINE_SHARE = 2 / 3
 """Least share of the baseline years that need a value (a choice of this program)."""
@@ -34,6 +36,7 @@ def yield_grids(
     response: Response,
     coefficients: np.ndarray,
     baseline: tuple[int, int],
+    technology: pd.Series | None = None,
 ) -> xr.Dataset:
     """Return yield ratio, yield, the effect of each term and the extrapolation flags.
 
@@ -52,13 +55,16 @@ def yield_grids(
         float64, shape (k,), in document order.
     baseline
         First and last year of the baseline.
+    technology
+        Factor of the yield by year; none where it is constant.
 
     Returns
     -------
     Dataset
         yield_ratio (1), yield (t ha-1), effect_<term> (change of log yield, or t ha-1 under a
         level link) float64 (year, lat, lon); extrapolated, integer bits (year, lat, lon), the
-        first index of the document is bit 1; reason int8 (lat, lon).
+        first index of the document is bit 1; reason int8 (lat, lon); with a technology path,
+        technology (year), which is in the yield and in nothing else.
     """
     years = indices["year"].values
     inside = (years >= baseline[0]) & (years <= baseline[1])
@@ -88,6 +94,13 @@ def yield_grids(
         for name, grid in zip(attributes, results[:-1], strict=True)
     }
     data["reason"] = results[-1].assign_attrs(reason_attributes())
+    if technology is not None:
+        factor = xr.DataArray(technology.loc[years].to_numpy(), dims="year")
+        data["yield"] = (data["yield"] * factor).assign_attrs(attributes["yield"])
+        data["yield"].attrs["comment"] = (
+            "baseline yield times yield_ratio times technology; harvested area as in the baseline"
+        )
+        data[TECHNOLOGY] = factor.assign_attrs(long_name="technology factor", units="1")
     dataset = xr.Dataset(data).drop_vars("crop_system", errors="ignore")
     return dataset.assign_coords(year=("year", years, YEAR_ATTRIBUTES))
 

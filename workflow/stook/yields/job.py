@@ -6,6 +6,7 @@ from contextlib import ExitStack
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import xarray as xr
 
 from stook.assessment.layout import Layout
@@ -19,6 +20,7 @@ from stook.grids.files import open_result, pixel_chunks, read_table
 from stook.yields.coefficients import coefficient_draws
 from stook.yields.grids import yield_grids
 from stook.yields.response import Response
+from stook.yields.technology import TableTechnology, technology_factors
 
 _COPIES = 6
 """Arrays of 4 bytes a value that a block holds per index, year and pixel, about."""
@@ -48,7 +50,7 @@ def grid(assessment: Assessment, simulation: str, crop: str, system: str) -> Non
     source = assessment.path(assessment.system(crop, system).response)
     table = layout.coefficients(crop, system)
     wildcards = {"simulation": simulation, "crop": crop, "system": system}
-    parents = [*tiles, table, source, layout.layers]
+    parents = [*tiles, table, source, *technology_files(assessment, crop), layout.layers]
     with Job(assessment, "yields_grid", parents, wildcards) as job, ExitStack() as stack:
         response = system_response(assessment, crop, system)
         layers = stack.enter_context(open_result(layout.layers))
@@ -67,10 +69,26 @@ def grid(assessment: Assessment, simulation: str, crop: str, system: str) -> Non
             response,
             central_coefficients(table, response),
             assessment.periods.baseline,
+            technology_of(assessment, crop, season["year"].values),
         )
         grids = grids.assign_coords(AnalysisGrid.from_dataset(layers).coordinates())
         title = f"Yields of {crop}, {system}, {simulation}"
         job.netcdf(grids, layout.yields(simulation, crop, system), title)
+
+
+def technology_of(assessment: Assessment, crop: str, years: np.ndarray) -> pd.Series | None:
+    """Return the technology factor of a crop by year; None where it is constant."""
+    technology = assessment.crops[crop].technology
+    last = assessment.periods.baseline[1]
+    return technology_factors(technology, years, last, assessment.folder)
+
+
+def technology_files(assessment: Assessment, crop: str) -> list[Path]:
+    """Return the table of a crop's technology path, if it has one."""
+    technology = assessment.crops[crop].technology
+    if isinstance(technology, TableTechnology):
+        return [assessment.path(technology.file)]
+    return []
 
 
 def central_coefficients(path: Path, response: Response) -> np.ndarray:

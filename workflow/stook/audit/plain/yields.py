@@ -13,6 +13,7 @@ import numpy as np
 
 from stook.randomness import generator
 from stook.yields.response import Linear, Product, Quadratic, Response, Term
+from stook.yields.technology import Technology
 
 
 @dataclass(frozen=True)
@@ -163,6 +164,27 @@ def is_outside(response: Response, index: str, value: float) -> bool:
     """Return whether an index lies outside the range it was estimated in."""
     low, high = response.estimation_range[index]
     return not low <= value <= high
+
+
+def technology_factor(
+    technology: Technology, year: int, last: int, table: Mapping[int, float]
+) -> float:
+    """Return the technology factor of a year; `table` has the factors of a table by year."""
+    n = year - last
+    if n <= 0 or technology.form == "constant":
+        return 1.0
+    if technology.form == "linear":
+        return 1 + n * technology.rate / 100
+    if technology.form == "levelling-off":
+        gap = (technology.ceiling - 100) / 100
+        return 1 + gap - gap * math.exp(-n * technology.rate / 100 / gap)
+    known = {last: 1.0} | {one: factor for one, factor in table.items() if one > last}
+    before = max(one for one in known if one <= year)
+    after = min(one for one in known if one >= year)
+    if before == after:
+        return known[before]
+    share = (year - before) / (after - before)
+    return known[before] + share * (known[after] - known[before])
 
 
 def drawn_coefficients(response: Response, draws: int, seed: int) -> np.ndarray:
