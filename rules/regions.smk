@@ -24,6 +24,7 @@ rule regions_totals:
         coefficients=PLAN.coefficients,
         responses=PLAN.responses,
         technology=PLAN.technology,
+        concentrations=PLAN.concentrations,
         overlay=LAYOUT.overlay,
         layers=LAYOUT.layers,
     output:

@@ -23,6 +23,7 @@ rule yields_grid:
         coefficients=PLAN.coefficients,
         response=PLAN.response,
         technology=PLAN.technology,
+        concentrations=PLAN.concentrations,
         layers=LAYOUT.layers,
     output:
         grids=LAYOUT.yields("{simulation}", "{crop}", "{system}"),

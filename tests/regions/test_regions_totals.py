@@ -39,6 +39,7 @@ from stook.regions.totals import (
     totals_table,
 )
 from stook.trend.regions import regional_yields
+from stook.yields.job import coefficients, grid
 from stook.yields.response import Response
 
 RUN = "ALDER-ESM_high_r1"
@@ -339,6 +340,36 @@ def test_constant_technology_and_a_subset_have_the_same_bits(
     totals(part, RUN, "maize")
     expected = whole[whole["region"] == region].reset_index(drop=True)
     pd.testing.assert_frame_equal(table_of(part), expected, check_exact=True)
+
+
+def test_totals_with_co2_are_those_of_the_grid_in_a_subset_too(tmp_path: Path) -> None:
+    """The yields grid with central coefficients, times area, against draw 0."""
+    effect = {"ppm": [353, 550], "percent": 19, "low": 12, "high": 26, "source": "invented"}
+    co2 = {"use": "drawn", "file": "co2.csv", "crops": {"maize": effect}}
+    path = write_assessment(tmp_path, systems=("rainfed",), co2=co2)
+    rows = [f"high,{year},{360 + 3 * n}" for n, year in enumerate(YEARS)]
+    (tmp_path / "co2.csv").write_text("\n".join(["scenario,year,ppm", *rows]), encoding="utf-8")
+    tables = {}
+    for region in (None, next(iter(POLYGONS))):
+        assessment = write_results(path, region)
+        layout = Layout.of(assessment)
+        coefficients(assessment, "maize", "rainfed")
+        grid(assessment, RUN, "maize", "rainfed")
+        totals(assessment, RUN, "maize")
+        tables[region] = table_of(assessment)
+        if region is None:
+            yields = xr.load_dataset(layout.yields(RUN, "maize", "rainfed"))
+            area = xr.load_dataset(layout.layers)["area"].isel(crop_system=0)
+            shares = xr.load_dataset(layout.overlay)["coverage"]
+    for name in POLYGONS:
+        weight = (area * shares.sel(region=name)).where(yields["reason"] == 0, 0.0)
+        expected = (yields["yield"].fillna(0.0) * weight).sum(["lat", "lon"])
+        found = tables[None].query("region == @name and draw == 0")["production_t"]
+        np.testing.assert_allclose(found, expected, rtol=1e-12)
+    first = next(iter(POLYGONS))
+    expected = tables[None][tables[None]["region"] == first].reset_index(drop=True)
+    pd.testing.assert_frame_equal(tables[first], expected, check_exact=True)
+    assert tables[None].groupby("draw")["production_t"].sum().nunique() == 5
 
 
 def test_one_system_has_no_combination(tmp_path: Path) -> None:

@@ -19,6 +19,7 @@ from stook.assessment.load import assessment_digest
 from stook.assessment.schema import Assessment, WaterSystem
 from stook.assessment.variables import system_indices
 from stook.engine.code import code_digest
+from stook.yields.co2 import effect_of
 
 
 @dataclass(frozen=True)
@@ -67,6 +68,11 @@ def _extrapolation(job: Job) -> Any:
     return {name: spec.extrapolation for name, spec in systems.items() if own in (None, name)}
 
 
+def _co2(job: Job) -> Any:
+    effect = effect_of(job.assessment.co2, job.wildcards["crop"])
+    return [job.assessment.co2.use, _plain(effect)] if effect and job.assessment.co2 else None
+
+
 def _grid(job: Job) -> Any:
     return job.assessment.grid.model_dump(mode="json", exclude={"tiles"})
 
@@ -80,6 +86,7 @@ SECTIONS: dict[str, Callable[[Job], Any]] = {
     "assessment": lambda job: assessment_digest(job.assessment),
     "baseline": lambda job: job.assessment.periods.baseline,
     "calibration": _calibration,
+    "co2": _co2,
     "codec": lambda job: job.assessment.store.daily_codec,
     "correction": _correction,
     "draws": lambda job: job.assessment.ensemble.draws,
@@ -111,9 +118,9 @@ RULES: dict[str, tuple[str, ...]] = {
     "correct_tile": ("variables", "correction", "calibration", "seed", "codec"),
     "correct_summary": (),
     "season_tile": ("indices", "phases"),
-    "yields_coefficients": ("draws", "seed"),
-    "yields_grid": ("baseline", "extrapolation", "technology"),
-    "regions_totals": ("baseline", "extrapolation", "technology"),
+    "yields_coefficients": ("draws", "seed", "co2"),
+    "yields_grid": ("baseline", "extrapolation", "technology", "co2"),
+    "regions_totals": ("baseline", "extrapolation", "technology", "co2"),
     "ensemble_changes": ("baseline", "horizons", "weights"),
     "ensemble_pixels": ("baseline", "horizons", "weights"),
     "ensemble_risk": ("baseline", "horizons", "ensemble", "supply"),

@@ -50,7 +50,7 @@ def general(assessment: Assessment) -> list[tuple[str, str]]:
             "Held at its baseline, pixel by pixel. Production changes with yield alone.",
         ),
         ("Technology", _technology(assessment)),
-        ("CO2", "The effect of rising CO2 on crops is not included."),
+        ("CO2", _co2(assessment)),
         (
             "Crop calendar",
             "Planting and maturity dates stay as they are; no shift with the climate.",
@@ -133,6 +133,25 @@ def crop_inputs(assessment: Assessment) -> list[tuple[str, str, str, str, str]]:
         calendar = f"{_layer(spec.calendar.planting)} to {_layer(spec.calendar.maturity)}"
         rows.append((crop, system, _layer(spec.area), calendar, _layer(spec.baseline_yield)))
     return rows
+
+
+def _co2(assessment: Assessment) -> str:
+    spec = assessment.co2
+    if spec is None or spec.use == "off":
+        return "The effect of rising CO2 on crops is not included."
+    effects = "; ".join(
+        f"{crop} {one.percent:g} % ({one.low:g} to {one.high:g} %) from {one.ppm[0]:g} to "
+        f"{one.ppm[1]:g} ppm ({one.source})"
+        for crop, one in spec.crops.items()
+    )
+    how = {"central": "the central effect in every draw", "drawn": "an effect drawn for each draw"}
+    others = [crop for crop in assessment.crops if crop not in spec.crops]
+    without = f" None on {', '.join(others)}." if others else ""
+    return (
+        f"The effect of rising CO2 on yields is included, {how[spec.use]}, as a power of the "
+        f"concentration ({spec.file.name}): {effects}.{without} It is not in the observed impact. "
+        "Published effects disagree: compare with a run without it."
+    )
 
 
 def _technology(assessment: Assessment) -> str:

@@ -84,6 +84,13 @@ class VapourPressureDeficit(_Definition):
     measure: Literal["vapour-pressure-deficit"]
 
 
+class Concentration(_Definition):
+    """Logarithm of the year's CO2 concentration over a reference; not written in a document."""
+
+    measure: Literal["co2"] = "co2"
+    reference: float = Field(description="ppm")
+
+
 IndexDefinition = Annotated[
     DegreeDays
     | Mean
