@@ -23,6 +23,8 @@ rule regions_totals:
         seasons=PLAN.seasons,
         coefficients=PLAN.coefficients,
         responses=PLAN.responses,
+        technology=PLAN.technology,
+        concentrations=PLAN.concentrations,
         overlay=LAYOUT.overlay,
         layers=LAYOUT.layers,
     output:

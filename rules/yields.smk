@@ -22,6 +22,8 @@ rule yields_grid:
         seasons=PLAN.seasons,
         coefficients=PLAN.coefficients,
         response=PLAN.response,
+        technology=PLAN.technology,
+        concentrations=PLAN.concentrations,
         layers=LAYOUT.layers,
     output:
         grids=LAYOUT.yields("{simulation}", "{crop}", "{system}"),

@@ -11,9 +11,11 @@ from fit_inputs import TRUTH, estimated, load, panel, write
 from stook.errors import InputError
 from stook.fit.design import make_design
 from stook.fit.estimate import estimate
+from stook.fit.figures import curve_figure
 from stook.fit.resampling import bootstrap
 from stook.fit.tables import comparison, curves, farmer_and_weather
 from stook.fit.validation import leave_units_out, leave_years_out
+from stook.fit.writing import response_document
 from stook.randomness import generator
 
 WEATHER = " + heat + rain + I(rain**2)"
@@ -223,6 +225,35 @@ def test_curve_and_band_by_hand(tmp_path) -> None:
     at_mean = rain[np.isclose(rain["value"], mean)]
     assert at_mean[["effect", "low", "high"]].abs().max(axis=None) < 1e-9
     assert (table[table["term"] == "heat"]["index_unit"] == "degC day").all()
+
+
+def test_product_against_statsmodels(tmp_path) -> None:
+    """statsmodels, least squares with dummies: the product of heat and rain; curves by hand."""
+    frame = panel()
+    terms = {
+        "heat": {"form": "linear", "index": "heat"},
+        "rain": {"form": "linear", "index": "rain"},
+        "both": {"form": "product", "indices": ["heat", "rain"]},
+    }
+    fit, sample = load(write(tmp_path, frame, specifications={"product": terms}))
+    found = estimate(fit, "product", sample, inputs=False)
+    data = prepared(frame)
+    expected = smf.ols("y ~ C(unit) + year + heat + rain + heat:rain", data).fit().params
+    names = ["heat", "rain", "heat:rain"]
+    np.testing.assert_allclose(found.weather, expected[names], rtol=1e-7)
+    table = curves(found, sample, fit.weather.indices, "level")
+    both = table[table["term"] == "both"]
+    assert list(both["index"].unique()) == ["heat", "rain"]
+    for index, other in (("heat", "rain"), ("rain", "heat")):
+        last = both[both["index"] == index].iloc[-1]
+        change = frame[other].mean() * (frame[index].max() - frame[index].mean())
+        assert last["effect"] == pytest.approx(change * found.weather[2], rel=1e-9)
+        error = abs(change) * np.sqrt(found.covariance[2, 2])
+        assert last["high"] - last["effect"] == pytest.approx(2.2009852 * error, rel=1e-6)
+    assert len(curve_figure(table, sample, "invented").figure.axes) == 6
+    written = response_document(fit, found, sample, fit.weather.indices, {})
+    assert written.terms["both"].used == ("heat", "rain")
+    assert written.coefficient_vector[2] == found.weather[2]
 
 
 def test_noiseless_panel_gives_the_truth(tmp_path) -> None:

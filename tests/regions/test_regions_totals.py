@@ -11,6 +11,7 @@ import shapely
 import xarray as xr
 from region_inputs import (
     BASELINE,
+    HORIZON,
     POLYGONS,
     SYSTEMS,
     YEARS,
@@ -24,6 +25,8 @@ from stook.assessment.load import load_assessment
 from stook.assessment.schema import Assessment
 from stook.audit.plain.regions import cell_share, region_year
 from stook.constants import OUTSIDE
+from stook.ensemble.changes import changes_of
+from stook.ensemble.series import read_series
 from stook.grids.files import open_result, read_table
 from stook.regions.job import totals
 from stook.regions.overlay import overlay_dataset
@@ -35,6 +38,8 @@ from stook.regions.totals import (
     system_totals,
     totals_table,
 )
+from stook.trend.regions import regional_yields
+from stook.yields.job import coefficients, grid
 from stook.yields.response import Response
 
 RUN = "ALDER-ESM_high_r1"
@@ -282,6 +287,89 @@ def test_neither_tiles_nor_blocks_change_a_bit(full: Assessment, tmp_path: Path)
     for one in found[1:]:
         for name in ("production", "area", "missing_area", "flagged_area"):
             np.testing.assert_array_equal(getattr(one, name), getattr(found[0], name))
+
+
+TECHNOLOGY = {"form": "levelling-off", "rate": 1.5, "ceiling": 140}
+
+
+def with_technology(full: Assessment, folder: Path, **technology: object) -> Assessment:
+    """Write the same world with a technology path of its crop, and its totals."""
+    content = full.model_dump(mode="json")["crops"]["maize"] | {"technology": technology}
+    assessment = write_results(write_assessment(folder, crops={"maize": content}))
+    totals(assessment, RUN, "maize")
+    return assessment
+
+
+def test_technology_scales_production_and_nothing_else(full: Assessment, tmp_path: Path) -> None:
+    changed = with_technology(full, tmp_path, **TECHNOLOGY)
+    plain, table = table_of(full), table_of(changed)
+    assert list(table) == [*COLUMNS, "technology"]
+    after = (table["year"] - BASELINE[1]).clip(lower=0)
+    expected = 1 + 0.4 * (1 - np.exp(-0.015 * after / 0.4))
+    np.testing.assert_allclose(table["technology"], expected, rtol=1e-14)
+    assert (table["technology"] > 1.1).any()
+    np.testing.assert_array_equal(table["production_t"], plain["production_t"] * table.technology)
+    others = [name for name in COLUMNS if name != "production_t"]
+    pd.testing.assert_frame_equal(table[others], plain[others], check_exact=True)
+
+
+def test_changes_and_trends_are_against_the_same_technology(
+    full: Assessment, tmp_path: Path
+) -> None:
+    changed = with_technology(full, tmp_path, **TECHNOLOGY)
+    one, other = (
+        read_series(Layout.of(assessment).totals(RUN, "maize")) for assessment in (full, changed)
+    )
+    for system in one:
+        pair = [changes_of([run[system]], BASELINE, HORIZON) for run in (one, other)]
+        assert np.isfinite(pair[0].change).any()
+        np.testing.assert_allclose(pair[1].change, pair[0].change, rtol=0, atol=1e-12)
+        np.testing.assert_allclose(pair[1].horizon, pair[0].horizon, rtol=1e-14)
+    yields = [regional_yields(table_of(assessment)) for assessment in (full, changed)]
+    pd.testing.assert_frame_equal(yields[1], yields[0], rtol=1e-14)
+
+
+def test_constant_technology_and_a_subset_have_the_same_bits(
+    full: Assessment, tmp_path: Path
+) -> None:
+    constant = with_technology(full, tmp_path / "constant", form="constant")
+    pd.testing.assert_frame_equal(table_of(constant), table_of(full), check_exact=True)
+    changed = with_technology(full, tmp_path / "changed", **TECHNOLOGY)
+    whole, region = table_of(changed), next(iter(POLYGONS))
+    part = write_results(changed.source, region)
+    totals(part, RUN, "maize")
+    expected = whole[whole["region"] == region].reset_index(drop=True)
+    pd.testing.assert_frame_equal(table_of(part), expected, check_exact=True)
+
+
+def test_totals_with_co2_are_those_of_the_grid_in_a_subset_too(tmp_path: Path) -> None:
+    """The yields grid with central coefficients, times area, against draw 0."""
+    effect = {"ppm": [353, 550], "percent": 19, "low": 12, "high": 26, "source": "invented"}
+    co2 = {"use": "drawn", "file": "co2.csv", "crops": {"maize": effect}}
+    path = write_assessment(tmp_path, systems=("rainfed",), co2=co2)
+    rows = [f"high,{year},{360 + 3 * n}" for n, year in enumerate(YEARS)]
+    (tmp_path / "co2.csv").write_text("\n".join(["scenario,year,ppm", *rows]), encoding="utf-8")
+    tables = {}
+    for region in (None, next(iter(POLYGONS))):
+        assessment = write_results(path, region)
+        layout = Layout.of(assessment)
+        coefficients(assessment, "maize", "rainfed")
+        grid(assessment, RUN, "maize", "rainfed")
+        totals(assessment, RUN, "maize")
+        tables[region] = table_of(assessment)
+        if region is None:
+            yields = xr.load_dataset(layout.yields(RUN, "maize", "rainfed"))
+            area = xr.load_dataset(layout.layers)["area"].isel(crop_system=0)
+            shares = xr.load_dataset(layout.overlay)["coverage"]
+    for name in POLYGONS:
+        weight = (area * shares.sel(region=name)).where(yields["reason"] == 0, 0.0)
+        expected = (yields["yield"].fillna(0.0) * weight).sum(["lat", "lon"])
+        found = tables[None].query("region == @name and draw == 0")["production_t"]
+        np.testing.assert_allclose(found, expected, rtol=1e-12)
+    first = next(iter(POLYGONS))
+    expected = tables[None][tables[None]["region"] == first].reset_index(drop=True)
+    pd.testing.assert_frame_equal(tables[first], expected, check_exact=True)
+    assert tables[None].groupby("draw")["production_t"].sum().nunique() == 5
 
 
 def test_one_system_has_no_combination(tmp_path: Path) -> None:

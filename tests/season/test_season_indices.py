@@ -27,6 +27,7 @@ WANTED = {
     "dry_spell": {"measure": "longest-dry-spell"},
     "wet_days": {"measure": "wet-days", "wet_day": 0.1, "phase": "flowering"},
     "dry_air": {"measure": "vapour-pressure-deficit"},
+    "downpour": {"measure": "largest-total"},
 }
 
 
@@ -69,12 +70,32 @@ def test_against_pandas() -> None:
     dry = season.pr < 1
     runs = dry.groupby([years, (~dry).cumsum()]).sum().groupby(level=0).max()
     np.testing.assert_array_equal(found["dry_spell"], runs)
+    wettest = season.groupby(years).pr.apply(lambda rain: rain.rolling(5).sum().max())
+    np.testing.assert_allclose(found["downpour"], wettest, rtol=1e-12)
     # Flowering: 151 days from day 100; 67.95 to 98.15 days after its begin.
     flowering = frame[(frame.index.day_of_year >= 168) & (frame.index.day_of_year < 198)]
     part = flowering.groupby(flowering.index.year)
     np.testing.assert_allclose(found["nights"], part.tasmin.mean(), rtol=1e-12)
     wet = (flowering.pr >= 0.1).groupby(flowering.index.year).mean()
     np.testing.assert_allclose(found["wet_days"], wet * 151 * 0.2, rtol=1e-12)
+
+
+def test_largest_total_lies_inside_the_season_and_is_missing_with_any_day() -> None:
+    """Planting 11, maturity 20: days 10 to 19 counted from zero."""
+    rain = np.zeros(365)
+    rain[[9, 10, 11, 13, 19, 20]] = [50.0, 4.0, 3.0, 2.0, 8.0, 60.0]
+    climate = weather(whole_years(2001, 2001, "noleap"), (1, 2))
+    climate["pr"] = ("time", "lat", "lon"), np.repeat(rain, 2).reshape(365, 1, 2).astype(np.float32)
+    adapter: TypeAdapter[IndexDefinition] = TypeAdapter(IndexDefinition)
+    for days, expected in ((1, 8.0), (2, 8.0), (3, 8.0), (4, 9.0), (10, 17.0), (11, np.nan)):
+        wanted = {"most": adapter.validate_python({"measure": "largest-total", "days": days})}
+        for missing, result in ((9, expected), (15, np.nan), (10, np.nan), (19, np.nan)):
+            gap = climate.copy(deep=True)
+            gap["pr"][missing, 0, 1] = np.nan
+            found = season_indices(gap, layer(gap, 11), layer(gap, 20), no_reason(gap), wanted, {})[
+                "most"
+            ].squeeze()
+            np.testing.assert_array_equal(found, [expected, result])
 
 
 @pytest.mark.parametrize("calendar", ["standard", "noleap", "360_day", "all_leap", "julian"])

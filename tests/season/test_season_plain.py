@@ -53,6 +53,13 @@ def measures(coarse: bool) -> st.SearchStrategy[dict[str, object]]:
         ),
         st.fixed_dictionaries(
             {
+                "measure": st.just("largest-total"),
+                "days": st.sampled_from([1, 2, 5, 30]),
+                "phase": phase,
+            }
+        ),
+        st.fixed_dictionaries(
+            {
                 "measure": st.sampled_from(["wet-days", "longest-dry-spell"]),
                 "wet_day": st.sampled_from([0.1, 1.0, 5.0]),
                 "phase": phase,

@@ -122,8 +122,12 @@ def test_kernels_by_hand() -> None:
     system=st.sampled_from(sorted(SYSTEMS)),
     rise=st.floats(-0.6, 0.6),
     missing=st.integers(0, 3),
+    product=st.booleans(),
+    extrapolation=st.sampled_from(["flag", "hold"]),
 )
-def test_same_as_the_plain_path(seed: int, system: str, rise: float, missing: int) -> None:
+def test_same_as_the_plain_path(
+    seed: int, system: str, rise: float, missing: int, product: bool, extrapolation: str
+) -> None:
     random = np.random.default_rng(seed)
     years = np.arange(1971, 2016)
     indices = {
@@ -132,7 +136,16 @@ def test_same_as_the_plain_path(seed: int, system: str, rise: float, missing: in
         "night": 15 + 0.6 * random.standard_normal(45),
     }
     indices["rain"][random.choice(45, missing, replace=False)] = np.nan
-    document = Response.model_validate(response(system))
+    content = response(system) | {"extrapolation": extrapolation}
+    content["estimation_range"] |= {"heat": [40, 80], "rain": [300, 500]}
+    if product:
+        content["terms"]["both"] = {
+            "form": "product",
+            "indices": ["heat", "rain"],
+            "coefficient": 4e-6,
+        }
+        content["standard_errors"] = [*content["standard_errors"], 1e-6]
+    document = Response.model_validate(content)
     coefficients = document.coefficient_vector
     period = (1981, 2015)
     inside = years >= 1981

@@ -10,8 +10,9 @@ from scipy import sparse
 from stook.audit.plain.yields import yields_of_pixel
 from stook.yields.coefficients import coefficient_draws
 from stook.yields.draws import DrawTotals, draw_totals
+from stook.yields.response import Response
 from stook.yields.response_terms import design_matrix
-from yields_inputs import invented_indices, response
+from yields_inputs import invented_indices, response, with_product
 
 YEARS = range(1991, 2031)
 BASELINE = (1991, 2010)
@@ -21,8 +22,14 @@ INSIDE = np.array([BASELINE[0] <= year <= BASELINE[1] for year in YEARS])
 class Case:
     """A block of invented pixels in three regions, two of which overlap."""
 
-    def __init__(self, link: str = "log", draws: int = 40, shape: tuple[int, int] = (4, 6)) -> None:
-        self.model = response(link)
+    def __init__(
+        self,
+        link: str = "log",
+        draws: int = 40,
+        shape: tuple[int, int] = (4, 6),
+        model: Response | None = None,
+    ) -> None:
+        self.model = model or response(link)
         self.indices = invented_indices(YEARS, shape)
         self.design = design_matrix(self.model, self.indices)
         random = np.random.default_rng(2)
@@ -81,6 +88,34 @@ def test_same_as_plain_loops(link: str) -> None:
     case = Case(link)
     draws = range(0, 41, 4)
     np.testing.assert_allclose(case.totals()[list(draws)], case.plain(draws), rtol=1e-12)
+
+
+@pytest.mark.parametrize("link", ["log", "level"])
+def test_same_as_plain_loops_with_a_product(link: str) -> None:
+    case = Case(link, shape=(2, 3), model=with_product(link))
+    draws = range(0, 41, 8)
+    np.testing.assert_allclose(case.totals()[list(draws)], case.plain(draws), rtol=1e-12)
+    assert not np.allclose(case.totals(), Case(link, shape=(2, 3)).totals(), rtol=1e-3)
+
+
+@pytest.mark.parametrize("link", ["log", "level"])
+def test_same_as_plain_loops_with_marginal_effects_held(link: str) -> None:
+    case = Case(link, shape=(2, 3), model=with_product(link, extrapolation="hold"))
+    draws = range(0, 41, 8)
+    np.testing.assert_allclose(case.totals()[list(draws)], case.plain(draws), rtol=1e-12)
+    flag = Case(link, shape=(2, 3), model=with_product(link))
+    assert not np.allclose(case.totals(), flag.totals(), rtol=1e-4)
+
+
+def test_inside_the_range_held_draws_are_the_same_bits() -> None:
+    totals = []
+    for extrapolation in ("flag", "hold"):
+        model = with_product(extrapolation=extrapolation)
+        case = Case(model=model)
+        inside = {n: case.indices[n].clip(*model.estimation_range[n]) for n in model.indices}
+        case.design = design_matrix(model, case.indices.assign(inside))
+        totals.append(case.totals())
+    assert np.array_equal(*totals)
 
 
 def test_percentiles_over_draws_are_those_of_a_plain_loop() -> None:

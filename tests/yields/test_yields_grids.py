@@ -8,7 +8,7 @@ import xarray as xr
 from stook.grids.missing import Reason
 from stook.yields.grids import yield_grids
 from stook.yields.response import Response
-from yields_inputs import invented_indices, layer, response
+from yields_inputs import invented_indices, layer, response, with_product
 
 BASELINE = (2001, 2003)
 
@@ -80,11 +80,21 @@ def test_no_climate_change_gives_no_yield_change(link: str) -> None:
     assert np.array_equal(before[order], after)
 
 
-def test_effects_add_up_to_the_change_of_log_yield() -> None:
-    found = grids(invented_indices(range(2001, 2031), (2, 2)), response(), (2001, 2020))
-    total = sum(found[f"effect_{term}"] for term in ("growth", "heat", "rain"))
+@pytest.mark.parametrize("model", [response(), with_product()])
+def test_effects_add_up_to_the_change_of_log_yield(model: Response) -> None:
+    found = grids(invented_indices(range(2001, 2031), (2, 2)), model, (2001, 2020))
+    total = sum(found[f"effect_{term}"] for term in model.terms)
     log = np.log(found["yield_ratio"])
     np.testing.assert_allclose(total - total[0], log - log[0], atol=1e-12)
+
+
+def test_a_product_by_hand() -> None:
+    """h = -0.004 heat + 4e-6 heat rain: rain of 500 mm halves the harm of heat, 1000 mm ends it."""
+    indices = one_pixel([1500.0] * 4, [0, 0, 0, 50], [500.0] * 4)
+    found = grids(indices, with_product()).isel(lat=0, lon=0)
+    np.testing.assert_allclose(found["effect_heat_and_rain"], [0, 0, 0, 0.1], atol=1e-15)
+    np.testing.assert_allclose(found["yield_ratio"], [1, 1, 1, np.exp(-0.1)], rtol=1e-14)
+    assert "heat and rain (product)" in found["effect_heat_and_rain"].attrs["long_name"]
 
 
 def test_flags_say_which_index_is_outside_its_range() -> None:
@@ -98,6 +108,21 @@ def test_flags_say_which_index_is_outside_its_range() -> None:
     np.testing.assert_array_equal(found.squeeze(), [0, 0, 0, 1, 2 + 4, 1 + 2 + 4])
     np.testing.assert_array_equal(found.attrs["flag_masks"], [1, 2, 4])
     assert found.attrs["flag_meanings"] == "growth_outside heat_outside rain_outside"
+
+
+def test_held_marginal_effects_by_hand() -> None:
+    """Rain beyond 700 mm: slope 0.0012 - 2e-6 x 700 = -0.0002 a mm; the flags stay."""
+    indices = one_pixel([1500.0] * 5, [0.0] * 5, [700, 700, 700, 800, 600])
+    flag, hold = (
+        grids(indices, response(extrapolation=how)).isel(lat=0, lon=0) for how in ("flag", "hold")
+    )
+    np.testing.assert_allclose(hold["effect_rain"], [0, 0, 0, -0.02, 0.01], atol=1e-15)
+    np.testing.assert_allclose(flag["effect_rain"], [0, 0, 0, -0.03, 0.01], atol=1e-15)
+    np.testing.assert_array_equal(hold["extrapolated"], flag["extrapolated"])
+    assert "held" in hold["extrapolated"].attrs["comment"]
+    for name in ("yield_ratio", "yield", *(f"effect_{term}" for term in response().terms)):
+        inside = [0, 1, 2, 4]
+        assert flag[name].values[inside].tobytes() == hold[name].values[inside].tobytes()
 
 
 def test_an_index_no_term_uses_is_neither_needed_nor_flagged() -> None:

@@ -14,10 +14,13 @@ from stook.assessment.layout import Layout
 from stook.assessment.load import load_assessment
 from stook.assessment.schema import Assessment
 from stook.audit.ledger import Job, read_record
+from stook.engine.fingerprints import Job as Planned
+from stook.engine.fingerprints import fingerprint
 from stook.errors import ResultsError
 from stook.grids.analysis import analysis_grid, tile_count
 from stook.grids.files import open_result, read_table
 from stook.grids.missing import reason_attributes
+from stook.report.assumptions import general
 from stook.yields.job import coefficients, grid
 from yields_inputs import COMMON, invented_indices
 
@@ -181,6 +184,89 @@ def test_a_region_alone_gives_the_same_bits(
     expected = whole[1].isel(lon=slice(0, 5))
     for name in expected.variables:
         np.testing.assert_array_equal(result[name], expected[name], strict=True)
+
+
+def test_the_system_of_the_assessment_overrides_the_document(tmp_path: Path) -> None:
+    assessment = write_inputs(tmp_path)
+    flag = run(assessment)
+    job = Planned(assessment, {"simulation": SIMULATION, "crop": "maize", "system": "rainfed"}, ())
+    before = {rule: fingerprint(rule, job) for rule in ("yields_grid", "regions_totals")}
+    content = yaml.safe_load(assessment.source.read_text(encoding="utf-8"))
+    content["crops"]["maize"]["systems"]["rainfed"]["extrapolation"] = "hold"
+    assessment.source.write_text(yaml.safe_dump(content), encoding="utf-8")
+    changed = load_assessment(assessment.source)
+    hold = run(changed)
+    np.testing.assert_array_equal(hold["extrapolated"], flag["extrapolated"])
+    base = flag["year"].values <= 2010
+    untouched = ((flag["extrapolated"] == 0) | ~base[:, None, None]).all("year").values
+    outside = (flag["extrapolated"] != 0).values
+    assert (hold["effect_rain"].values != flag["effect_rain"].values)[outside].any()
+    same = ~outside & untouched
+    assert same.any()
+    np.testing.assert_array_equal(hold["yield"].values[same], flag["yield"].values[same])
+    now = Planned(changed, job.wildcards, ())
+    for rule, digests in before.items():
+        (one,) = set(digests) - set(fingerprint(rule, now))
+        assert one.startswith("extrapolation:")
+
+
+EFFECT = {"ppm": [353, 550], "percent": 19, "low": 12, "high": 26, "source": "invented"}
+
+
+def with_co2(folder: Path, use: str, region: str | None = None, tiles: int = 1) -> Assessment:
+    """Write the same inputs with an effect of CO2; 2 ppm more every year."""
+    assessment = write_inputs(folder, tiles=tiles, region=region)
+    rows = [f"{'historical' if y < 2011 else 'high'},{y},{350 + 2 * (y - 1991)}" for y in YEARS]
+    (folder / "co2.csv").write_text("\n".join(["scenario,year,ppm", *rows]), encoding="utf-8")
+    content = yaml.safe_load(assessment.source.read_text(encoding="utf-8"))
+    content["co2"] = {"use": use, "file": "co2.csv", "crops": {"maize": EFFECT}}
+    assessment.source.write_text(yaml.safe_dump(content), encoding="utf-8")
+    return load_assessment(assessment.source, regions=[region] if region else [])
+
+
+def test_co2_that_is_off_is_none_bit_for_bit(
+    whole: tuple[Assessment, xr.Dataset], tmp_path: Path
+) -> None:
+    assessment = with_co2(tmp_path, "off")
+    result = run(assessment)
+    assert list(result.variables) == list(whole[1].variables)
+    for name in whole[1].variables:
+        np.testing.assert_array_equal(result[name], whole[1][name], strict=True)
+    tables = [
+        read_table(Layout.of(one).coefficients("maize", "rainfed"))
+        for one in (assessment, whole[0])
+    ]
+    pd.testing.assert_frame_equal(*tables, check_exact=True)
+
+
+@pytest.mark.parametrize("use", ["central", "drawn"])
+def test_co2_adds_a_term_and_leaves_the_other_draws(
+    whole: tuple[Assessment, xr.Dataset], tmp_path: Path, use: str
+) -> None:
+    assessment = with_co2(tmp_path, use)
+    result = run(assessment)
+    table = read_table(Layout.of(assessment).coefficients("maize", "rainfed"))
+    before = read_table(Layout.of(whole[0]).coefficients("maize", "rainfed"))
+    pd.testing.assert_frame_equal(table.drop(columns="co2"), before, check_exact=True)
+    assert len(set(table["co2"])) == (1 if use == "central" else 13)
+    b = np.log(1.19) / np.log(550 / 353)
+    gain = (350 + 2 * (np.array(YEARS) - 1991.0)) ** b
+    ratio = whole[1]["yield_ratio"] * gain[:, None, None]
+    ratio = ratio / ratio.sel(year=slice(1991, 2010)).mean("year")
+    np.testing.assert_allclose(result["yield_ratio"], ratio, rtol=1e-12)
+    texts = dict(general(assessment))
+    assert "maize 19 % (12 to 26 %) from 353 to 550 ppm (invented)" in texts["CO2"]
+    assert ("drawn for each draw" in texts["CO2"]) == (use == "drawn")
+
+
+def test_co2_in_a_region_alone_and_in_tiles_gives_the_same_bits(tmp_path: Path) -> None:
+    result = run(with_co2(tmp_path / "whole", "drawn"))
+    part = run(with_co2(tmp_path / "part", "drawn", region="Saltmere", tiles=3))
+    tiled = run(with_co2(tmp_path / "tiles", "drawn", tiles=4))
+    for name in result.variables:
+        np.testing.assert_array_equal(tiled[name], result[name], strict=True)
+        expected = result.isel(lon=slice(0, 5))[name]
+        np.testing.assert_array_equal(part[name], expected, strict=True)
 
 
 def test_coefficients_of_another_response_are_refused(tmp_path: Path) -> None:

@@ -47,7 +47,16 @@ def terms() -> st.SearchStrategy[dict[str, Any]]:
         )
         return st.one_of(linear, quadratic, piecewise)
 
-    one = st.sampled_from(list(SCALE)).flatmap(of)
+    product = st.builds(
+        lambda pair, c: {
+            "form": "product",
+            "indices": list(pair),
+            "coefficient": c / (SCALE[pair[0]] * SCALE[pair[1]]),
+        },
+        st.permutations(list(SCALE)).map(lambda names: names[:2]),
+        size,
+    )
+    one = st.one_of(st.sampled_from(list(SCALE)).flatmap(of), product)
     return st.lists(one, min_size=1, max_size=4).map(
         lambda given_: {f"term{n}": term for n, term in enumerate(given_)}
     )
@@ -60,15 +69,22 @@ def terms() -> st.SearchStrategy[dict[str, Any]]:
     intercept=st.sampled_from([0.0, 1.0, 4.0]),
     missing=st.lists(st.integers(0, len(YEARS) - 1), max_size=6),
     seed=st.integers(0, 99),
+    extrapolation=st.sampled_from(["flag", "hold"]),
 )
 def test_same_as_the_plain_path(
-    link: str, wanted: dict[str, Any], intercept: float, missing: list[int], seed: int
+    link: str,
+    wanted: dict[str, Any],
+    intercept: float,
+    missing: list[int],
+    seed: int,
+    extrapolation: str,
 ) -> None:
     count = sum(len(term.get("coefficients", [0])) for term in wanted.values())
     changes = {
         "link": link,
         "intercept": intercept,
         "terms": wanted,
+        "extrapolation": extrapolation,
         "standard_errors": [0.1] * count,
     }
     model = Response.model_validate(COMMON | changes)

@@ -39,6 +39,15 @@ def response(link: str = "log", **changes: Any) -> Response:
     return Response.model_validate(COMMON | {"link": link, "intercept": intercept} | changes)
 
 
+def with_product(link: str = "log", **changes: Any) -> Response:
+    """Return the invented response with less harm from heat where there is more rain."""
+    size = 1.0 if link == "log" else 3.0
+    term = {"form": "product", "indices": ["heat", "rain"], "coefficient": 4e-6 * size}
+    terms = COMMON["terms"] | {"heat_and_rain": term}
+    errors = [*COMMON["standard_errors"], 1e-6]
+    return response(link, terms=terms, standard_errors=errors, **changes)
+
+
 def invented_indices(years: range, shape: tuple[int, int], seed: int = 6) -> xr.Dataset:
     """Return season indices (year, lat, lon) and reasons (lat, lon), all valid."""
     random = np.random.default_rng(seed)

@@ -10,11 +10,17 @@ import numpy as np
 from stook.assessment.inventory import SeriesFacts, as_problems
 from stook.assessment.schema import Assessment
 from stook.assessment.simulations import Simulation
-from stook.assessment.variables import series_variables, sources, system_indices, system_response
+from stook.assessment.variables import (
+    series_variables,
+    sources,
+    system_indices,
+    system_response,
+    yield_response,
+)
 from stook.constants import OBSERVED
 from stook.ensemble.horizons import level_windows
 from stook.ensemble.supply import read_population
-from stook.errors import Problem, StookError
+from stook.errors import AssessmentError, Problem, StookError
 from stook.grids.analysis import AnalysisGrid
 from stook.season.definition import (
     SEASON,
@@ -22,11 +28,14 @@ from stook.season.definition import (
     DegreeDays,
     DrySpell,
     IndexDefinition,
+    LargestTotal,
     WetDays,
     needed_variables,
 )
+from stook.yields.co2 import HISTORICAL, concentrations, read_concentrations
+from stook.yields.technology import technology_factors
 
-DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays)
+DAILY_ONLY = (DegreeDays, DaysAbove, DrySpell, WetDays, LargestTotal)
 """Indices that cannot be taken from monthly or annual means."""
 
 
@@ -243,9 +252,18 @@ def weight_problems(assessment: Assessment, found: Sequence[Simulation]) -> list
 
 
 def table_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:
-    """Return what is wrong with the tables of global means and of population, if there are any."""
+    """Return what is wrong with the tables of technology, global means and population."""
     problems: list[Problem] = []
     population = assessment.supply.population
+    problems += _co2_problems(assessment, found)
+    for spec in assessment.crops.values():
+        ends = [years[1] for years in assessment.periods.horizons.values()]
+        last = assessment.periods.baseline[1]
+        years = np.array([last, *ends, *(assessment.periods.span or ())])
+        try:
+            technology_factors(spec.technology, years, last, assessment.folder)
+        except StookError as error:
+            problems += as_problems(error)
     try:
         level_windows(assessment, [s for s in found if s.name != OBSERVED])
     except StookError as error:
@@ -255,6 +273,31 @@ def table_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[
             read_population(assessment.path(population))
     except StookError as error:
         problems += as_problems(error)
+    return problems
+
+
+def _co2_problems(assessment: Assessment, found: Sequence[Simulation]) -> list[Problem]:
+    spec = assessment.co2
+    if spec is None or spec.use == "off":
+        return []
+    path, problems = assessment.path(spec.file), []
+    historical = assessment.simulations.historical or HISTORICAL
+    periods = [assessment.periods.baseline, *assessment.periods.horizons.values()]
+    try:
+        table = read_concentrations(path)
+    except StookError as error:
+        return as_problems(error)
+    for scenario in dict.fromkeys(s.scenario for s in found if s.name != OBSERVED):
+        try:
+            concentrations(table, scenario, historical, np.array(periods).ravel(), path)
+        except StookError as error:
+            problems += as_problems(error)
+    for crop, system in assessment.systems:
+        try:
+            yield_response(assessment, crop, system)
+        except AssessmentError as error:
+            if str(error).startswith("co2: "):
+                problems += as_problems(error)
     return problems
 
 

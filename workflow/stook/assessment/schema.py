@@ -13,6 +13,8 @@ from typing import Annotated, Any, Literal
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validator
 
 from stook.season.definition import SEASON, IndexDefinition, Variable
+from stook.yields.co2 import CarbonDioxide
+from stook.yields.technology import ConstantTechnology, Technology
 
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9.-]*")
 
@@ -234,6 +236,9 @@ class WaterSystem(Section):
     indices: dict[str, IndexDefinition] = Field(
         default_factory=dict, description="indices wanted besides those of the response"
     )
+    extrapolation: Literal["flag", "hold"] | None = Field(
+        None, description="overrides that of the response document"
+    )
 
     @model_validator(mode="after")
     def _valid_phases(self) -> WaterSystem:
@@ -249,6 +254,10 @@ class Crop(Section):
     """One crop with its water systems."""
 
     systems: dict[Name, WaterSystem] = Field(min_length=1, description="by name of the system")
+    technology: Technology = Field(
+        ConstantTechnology(),
+        description="path of yields in an unchanged climate; see docs/yields.md",
+    )
 
     @model_validator(mode="after")
     def _reserved(self) -> Crop:
@@ -370,6 +379,9 @@ class Assessment(Section):
     simulations: Simulations = Field(Simulations(), description="the climate models' output")
     correct: Correct = Field(Correct(), description="how simulations are corrected")
     crops: dict[Name, Crop] = Field(min_length=1, description="by name of the crop")
+    co2: CarbonDioxide | None = Field(
+        None, description="effect of CO2 on yields, see docs/yields.md; default: none"
+    )
     regions: Regions = Field(description="where totals are taken")
     ensemble: Ensemble = Field(Ensemble(), description="how members are put together")
     supply: Supply = Field(Supply(), description="from production to people supplied")
@@ -389,6 +401,8 @@ class Assessment(Section):
             raise ValueError(
                 "reference is required, unless correct.all.method is none for every variable"
             )
+        if self.co2 and (unknown := sorted(set(self.co2.crops) - set(self.crops))):
+            raise ValueError(f"co2.crops: {', '.join(unknown)} is no crop of the assessment")
         if unknown := sorted(set(self.supply.energy) - set(self.crops)):
             raise ValueError(f"supply.energy: {', '.join(unknown)} is no crop of the assessment")
         if self.reference is None and not (self.simulations.pattern or self.simulations.runs):

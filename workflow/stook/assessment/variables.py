@@ -6,12 +6,26 @@ from collections.abc import Collection
 
 from stook.assessment.schema import Assessment
 from stook.season.definition import DaysAbove, IndexDefinition, Mean, needed_variables
+from stook.yields.co2 import effect_of, with_co2
 from stook.yields.response import Response, load_response
 
 
 def system_response(assessment: Assessment, crop: str, system: str) -> Response:
-    """Return the response document of one crop x water system."""
-    return load_response(assessment.path(assessment.system(crop, system).response))
+    """Return the response of one crop x water system: its document, as the assessment uses it."""
+    spec = assessment.system(crop, system)
+    response = load_response(assessment.path(spec.response))
+    if spec.extrapolation is None:
+        return response
+    return response.model_copy(update={"extrapolation": spec.extrapolation})
+
+
+def yield_response(assessment: Assessment, crop: str, system: str) -> Response:
+    """Return the response that yields are taken from: `system_response`, with CO2 if it is on."""
+    response = system_response(assessment, crop, system)
+    effect = effect_of(assessment.co2, crop)
+    if effect is None or assessment.co2 is None:
+        return response
+    return with_co2(response, effect, assessment.co2.use)
 
 
 def system_indices(assessment: Assessment, crop: str, system: str) -> dict[str, IndexDefinition]:

@@ -19,6 +19,7 @@ from stook.assessment.load import assessment_digest
 from stook.assessment.schema import Assessment, WaterSystem
 from stook.assessment.variables import system_indices
 from stook.engine.code import code_digest
+from stook.yields.co2 import effect_of
 
 
 @dataclass(frozen=True)
@@ -61,6 +62,17 @@ def _calibration(job: Job) -> Any:
     return job.assessment.correct.calibration or job.assessment.periods.baseline
 
 
+def _extrapolation(job: Job) -> Any:
+    systems = job.assessment.crops[job.wildcards["crop"]].systems
+    own = job.wildcards.get("system")
+    return {name: spec.extrapolation for name, spec in systems.items() if own in (None, name)}
+
+
+def _co2(job: Job) -> Any:
+    effect = effect_of(job.assessment.co2, job.wildcards["crop"])
+    return [job.assessment.co2.use, _plain(effect)] if effect and job.assessment.co2 else None
+
+
 def _grid(job: Job) -> Any:
     return job.assessment.grid.model_dump(mode="json", exclude={"tiles"})
 
@@ -74,12 +86,14 @@ SECTIONS: dict[str, Callable[[Job], Any]] = {
     "assessment": lambda job: assessment_digest(job.assessment),
     "baseline": lambda job: job.assessment.periods.baseline,
     "calibration": _calibration,
+    "co2": _co2,
     "codec": lambda job: job.assessment.store.daily_codec,
     "correction": _correction,
     "draws": lambda job: job.assessment.ensemble.draws,
     "ensemble": lambda job: job.assessment.ensemble.model_dump(mode="json", exclude={"draws"}),
     "levels": _levels,
     "supply": lambda job: _plain(job.assessment.supply),
+    "extrapolation": _extrapolation,
     "grid": _grid,
     "horizons": lambda job: job.assessment.periods.horizons,
     "indices": _indices,
@@ -89,6 +103,7 @@ SECTIONS: dict[str, Callable[[Job], Any]] = {
     "seed": lambda job: job.assessment.seed,
     "span": lambda job: job.assessment.periods.span,
     "subset": lambda job: job.assessment.subset,
+    "technology": lambda job: _plain(job.assessment.crops[job.wildcards["crop"]].technology),
     "tiles": lambda job: job.assessment.grid.tiles,
     "trend": lambda job: _plain(job.assessment.trend),
     "variables": lambda job: job.variables,
@@ -103,17 +118,17 @@ RULES: dict[str, tuple[str, ...]] = {
     "correct_tile": ("variables", "correction", "calibration", "seed", "codec"),
     "correct_summary": (),
     "season_tile": ("indices", "phases"),
-    "yields_coefficients": ("draws", "seed"),
-    "yields_grid": ("baseline",),
-    "regions_totals": ("baseline",),
+    "yields_coefficients": ("draws", "seed", "co2"),
+    "yields_grid": ("baseline", "extrapolation", "technology", "co2"),
+    "regions_totals": ("baseline", "extrapolation", "technology", "co2"),
     "ensemble_changes": ("baseline", "horizons", "weights"),
     "ensemble_pixels": ("baseline", "horizons", "weights"),
     "ensemble_risk": ("baseline", "horizons", "ensemble", "supply"),
     "ensemble_robustness": ("baseline", "horizons", "weights", "levels"),
     "trend_pixels": ("trend", "seed"),
     "trend_regions": ("trend", "seed", "baseline"),
-    "trend_impact": ("trend", "seed", "baseline"),
-    "trend_impact_map": ("trend", "seed", "baseline"),
+    "trend_impact": ("trend", "seed", "baseline", "extrapolation"),
+    "trend_impact_map": ("trend", "seed", "baseline", "extrapolation"),
     "report_page": ("assessment",),
 }
 """The sections each rule depends on. What arrives through an input file is not repeated here."""

@@ -24,6 +24,8 @@ from stook.engine.fingerprints import Job, fingerprint
 from stook.engine.resources import memory_mb, threads_per_job
 from stook.errors import AssessmentError
 from stook.grids.analysis import analysis_grid, tile_count
+from stook.yields.co2 import effect_of
+from stook.yields.technology import TableTechnology
 
 RELATIVE = Layout(Path())
 """The layout as seen from inside the results folder."""
@@ -150,6 +152,20 @@ class Plan:
         systems = self.assessment.crops[wildcards.get("crop")].systems.values()
         paths = [self.inside(self.assessment.path(spec.response)) for spec in systems]
         return list(dict.fromkeys(paths))
+
+    def technology(self, wildcards: Wildcards) -> list[str]:
+        """Return the table of the technology path of a crop, if it has one."""
+        spec = self.assessment.crops[wildcards.get("crop")].technology
+        if not isinstance(spec, TableTechnology):
+            return []
+        return [self.inside(self.assessment.path(spec.file))]
+
+    def concentrations(self, wildcards: Wildcards) -> list[str]:
+        """Return the table of CO2 concentrations, if it acts on a crop."""
+        spec = self.assessment.co2
+        if spec is None or effect_of(spec, wildcards.get("crop")) is None:
+            return []
+        return [self.inside(self.assessment.path(spec.file))]
 
     def seasons(self, wildcards: Wildcards) -> list[Path]:
         """Return the season tiles of a simulation, crop and system (all systems without one)."""

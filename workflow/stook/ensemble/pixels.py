@@ -18,6 +18,7 @@ from stook.ensemble.series import Models
 from stook.grids.analysis import AnalysisGrid
 from stook.grids.files import open_result
 from stook.grids.missing import Reason, reason_attributes
+from stook.yields.technology import climate_yield
 
 _ROWS = 10  # rows of a block, as in the files
 _VALUES = ["change_mean", *(f"change_{name}" for name in SPREAD), "share_decrease", "agreement"]
@@ -104,7 +105,9 @@ def _band(
     changes, reasons = [], []
     for path in sources:
         with open_result(path) as dataset:
-            part = dataset[["yield", "reason"]].isel(lat=rows).load()
+            part = dataset.isel(lat=rows)
+            grids = {"yield": climate_yield(part), "reason": part["reason"]}
+            part = xr.Dataset(grids).load()
         changes.append(_changes(part, baseline, periods))
         reasons.append(part["reason"].values)
     change = np.array(changes)  # (simulation, horizon, lat, lon)

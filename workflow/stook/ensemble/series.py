@@ -14,6 +14,7 @@ import pyarrow.parquet as pq
 from stook.assessment.simulations import Simulation
 from stook.constants import CENTRAL_DRAW
 from stook.errors import AssessmentError, ResultsError
+from stook.yields.technology import TECHNOLOGY
 
 _COLUMNS = [
     *("region", "system", "year", "draw", "production_t", "area_ha", "extrapolated_share"),
@@ -32,7 +33,8 @@ class SystemSeries:
     years
         int64, ascending, shape (year,).
     production
-        t, shape (draw, region, year), draw 0 the central estimate; NaN where there is none.
+        t, at the technology of the baseline, shape (draw, region, year), draw 0 the central
+        estimate; NaN where there is none.
     area, missing_area
         ha with and without a yield, shape (region,).
     extrapolated
@@ -56,7 +58,9 @@ def read_series(path: Path) -> dict[str, SystemSeries]:
         If it is missing or cannot be read.
     """
     try:
-        table = pq.read_table(path, columns=_COLUMNS, read_dictionary=["region", "system"])
+        there = pq.read_schema(path).names
+        columns = _COLUMNS + [TECHNOLOGY] * (TECHNOLOGY in there)
+        table = pq.read_table(path, columns=columns, read_dictionary=["region", "system"])
     except FileNotFoundError:
         raise ResultsError(f"{path}: no such file; run the stage that makes it") from None
     except (OSError, ValueError, KeyError) as error:
@@ -67,7 +71,8 @@ def read_series(path: Path) -> dict[str, SystemSeries]:
 
 def series_of(frame: pd.DataFrame) -> dict[str, SystemSeries]:
     """Return the series of a totals table that is in memory; see `read_series`."""
-    table = pa.Table.from_pandas(frame[_COLUMNS], preserve_index=False)
+    columns = _COLUMNS + [TECHNOLOGY] * (TECHNOLOGY in frame)
+    table = pa.Table.from_pandas(frame[columns], preserve_index=False)
     for name in ("region", "system"):
         place = table.schema.get_field_index(name)
         table = table.set_column(place, name, table[name].dictionary_encode())
@@ -77,7 +82,9 @@ def series_of(frame: pd.DataFrame) -> dict[str, SystemSeries]:
 def _by_system(table: pa.Table) -> dict[str, SystemSeries]:
     regions, region_names = _codes(table["region"])
     systems, system_names = _codes(table["system"])
-    columns = {name: table[name].to_numpy() for name in _COLUMNS[2:]}
+    columns = {name: table[name].to_numpy() for name in table.column_names[2:]}
+    if TECHNOLOGY in columns:
+        columns["production_t"] = columns["production_t"] / columns[TECHNOLOGY]
     result = {}
     for number, system in enumerate(system_names):
         chosen = slice(None) if len(system_names) == 1 else systems == number

@@ -20,6 +20,7 @@ from stook.grids.analysis import AnalysisGrid
 from stook.grids.files import PIXEL_CHUNK, open_result
 from stook.grids.missing import Reason, reason_attributes
 from stook.regions.totals import region_weights
+from stook.yields.technology import climate_yield
 
 
 @dataclass(frozen=True)
@@ -104,7 +105,9 @@ def _read(
     changes, thresholds, reasons = [], [], []
     for path, own in zip(sources, windows, strict=True):
         with open_result(path) as dataset:
-            part = dataset[["yield", "reason"]].isel(lat=rows).load()
+            part = dataset.isel(lat=rows)
+            grids = {"yield": climate_yield(part), "reason": part["reason"]}
+            part = xr.Dataset(grids).load()
         years = part["year"].values
         grid = part["yield"].transpose("lat", "lon", "year").values.astype(np.float64)
         grid = np.where(part["reason"].values[..., None] == 0, grid, np.nan)

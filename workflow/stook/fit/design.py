@@ -137,11 +137,11 @@ def check_collinearity(
         Naming the first coefficients that cannot be estimated, and knots outside the data.
     """
     for term_name, term in terms.items():
-        low, high = sample.ranges[term.index]
+        low, high = sample.ranges[term.used[0]]
         if outside := [f"{k:g}" for k in getattr(term, "knots", ()) if not low < k < high]:
             raise InputError(
                 f"specification {name}: knot {', '.join(outside)} of term {term_name} lies outside "
-                f"the data ({term.index} is {low:g} to {high:g}); move it inside, or leave it out"
+                f"the data ({term.used[0]} is {low:g} to {high:g}); move it inside, or leave it out"
             )
     names = [*design.weather, *design.others]
     root = np.sqrt(design.weights)[:, None]

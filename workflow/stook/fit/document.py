@@ -148,7 +148,7 @@ class Fit(Section):
     def index_names(self) -> list[str]:
         """Every index some specification uses."""
         terms = [term for given in self.specifications.values() for term in given.values()]
-        return list(dict.fromkeys(term.index for term in terms))
+        return list(dict.fromkeys(index for term in terms for index in term.used))
 
 
 def load_fit(path: Path) -> Fit:

@@ -44,26 +44,27 @@ def residual_figure(table: pd.DataFrame, link: str) -> Drawing:
 
 def curve_figure(table: pd.DataFrame, sample: Sample, title: str) -> Drawing:
     """Draw the response to every term with its 95 % band and where the data lie."""
-    names = list(dict.fromkeys(table["term"]))
-    columns = min(_COLUMNS, len(names))
-    rows = -(-len(names) // columns)
+    parts = list(table.groupby(["term", "index"], sort=False))
+    columns = min(_COLUMNS, len(parts))
+    rows = -(-len(parts) // columns)
     with drawing_settings():
         figure = new_figure(0.5 + 2.6 * rows)
         axes = list(figure.subplots(rows, columns, squeeze=False).ravel())
-        for axis, name in zip(axes, names, strict=False):
-            part = table[table["term"] == name]
-            _curve(axis, part, sample.indices[part["index"].iloc[0]])
-        for axis in axes[len(names) :]:
+        for axis, ((_, index), part) in zip(axes, parts, strict=False):
+            _curve(axis, part, sample.indices[index])
+        for axis in axes[len(parts) :]:
             axis.set_axis_off()
         figure.suptitle(title, x=0.01, ha="left", fontsize=9.5)
     ends = "; ".join(
-        f"{name} {part['effect'].min():.3g} to {part['effect'].max():.3g}"
-        for name, part in table.groupby("term", sort=False)
+        f"{name if name == index else f'{name}, {index},'} "
+        f"{part['effect'].min():.3g} to {part['effect'].max():.3g}"
+        for (name, index), part in parts
     )
     return Drawing(
         "curves",
         "Change of yield with each index, from the mean of the panel (zero), with the 95 % "
-        "confidence band; the bars below show where the unit-years lie.",
+        "confidence band; in a product, with the other index at its mean; the bars "
+        "below show where the unit-years lie.",
         f"Response curves: {ends} ({table['effect_unit'].iloc[0]}).",
         figure,
         table,

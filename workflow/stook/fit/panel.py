@@ -65,7 +65,7 @@ class Sample:
 
 def column_names(term: Term) -> list[str]:
     """Return a name for every design column of a term; equal columns have equal names."""
-    shape = [term.form, term.index, *(f"{knot:g}" for knot in getattr(term, "knots", ()))]
+    shape = [term.form, *term.used, *(f"{knot:g}" for knot in getattr(term, "knots", ()))]
     return [" ".join((*shape, str(place + 1))) for place in range(len(term.coefficients))]
 
 
@@ -74,9 +74,7 @@ def design_columns(terms: list[Term], indices: Mapping[str, np.ndarray]) -> dict
     return {
         name: values
         for term in terms
-        for name, values in zip(
-            column_names(term), term_columns(term, indices[term.index]), strict=True
-        )
+        for name, values in zip(column_names(term), term_columns(term, indices), strict=True)
     }
 
 

@@ -14,6 +14,7 @@ from stook.fit.estimate import LEVEL, Estimate
 from stook.fit.panel import Sample
 from stook.fit.validation import leave_units_out, leave_years_out
 from stook.season.definition import IndexDefinition, unit_of
+from stook.yields.response import Term
 from stook.yields.response_terms import term_columns
 
 CURVE_POINTS = 121
@@ -110,6 +111,7 @@ def curves(
     """Return the response to every term over the range of its index, with 95 % bands.
 
     The effect is counted from the mean of the index in the panel; its band is of that difference.
+    A product has a curve for either index, the other at its mean.
 
     Returns
     -------
@@ -122,23 +124,35 @@ def curves(
     for name, term in found.terms.items():
         part = slice(start, start + len(term.coefficients))
         start = part.stop
-        low, high = sample.ranges[term.index]
-        mean = np.average(sample.indices[term.index], weights=sample.rows["weight"])
-        values = np.unique([*np.linspace(low, high, CURVE_POINTS), mean])
-        columns = np.column_stack(term_columns(term, values))
-        columns = columns - np.column_stack(term_columns(term, np.array([mean])))
-        effect = columns @ found.weather[part]
-        error = np.sqrt(np.einsum("ij,jk,ik->i", columns, found.covariance[part, part], columns))
-        shown = np.column_stack([effect, effect - reach * error, effect + reach * error])
-        if link == "log":
-            shown = 100 * np.expm1(shown)
-        table = pd.DataFrame(shown, columns=["effect", "low", "high"])
-        table.insert(0, "value", values)
-        table.insert(0, "index_unit", unit_of(definitions[term.index]))
-        table.insert(0, "index", term.index)
-        table.insert(0, "term", name)
-        parts.append(table.assign(effect_unit="%" if link == "log" else "t/ha"))
+        means = {
+            index: np.average(sample.indices[index], weights=sample.rows["weight"])
+            for index in term.used
+        }
+        for index in term.used:
+            values = np.unique([*np.linspace(*sample.ranges[index], CURVE_POINTS), means[index]])
+            columns = _from_means(term, index, values, means)
+            effect = columns @ found.weather[part]
+            variance = np.einsum("ij,jk,ik->i", columns, found.covariance[part, part], columns)
+            band = reach * np.sqrt(variance)
+            shown = np.column_stack([effect, effect - band, effect + band])
+            if link == "log":
+                shown = 100 * np.expm1(shown)
+            table = pd.DataFrame(shown, columns=["effect", "low", "high"])
+            table.insert(0, "value", values)
+            table.insert(0, "index_unit", unit_of(definitions[index]))
+            table.insert(0, "index", index)
+            table.insert(0, "term", name)
+            parts.append(table.assign(effect_unit="%" if link == "log" else "t/ha"))
     return pd.concat(parts, ignore_index=True)
+
+
+def _from_means(
+    term: Term, index: str, values: np.ndarray, means: Mapping[str, float]
+) -> np.ndarray:
+    """Return the columns of a term at values of one index, less those at the means; (value, k)."""
+    level = {name: np.full(len(values), mean) for name, mean in means.items()}
+    moved, still = term_columns(term, level | {index: values}), term_columns(term, level)
+    return np.column_stack(moved) - np.column_stack(still)
 
 
 def residual_table(found: Estimate, sample: Sample) -> pd.DataFrame:

@@ -44,7 +44,7 @@ class WeatherSums:
     def __post_init__(self) -> None:
         """Begin with nothing."""
         self.area = np.zeros(len(self.units))
-        self.names = list(dict.fromkeys(term.index for term in self.terms))
+        self.names = list(dict.fromkeys(index for term in self.terms for index in term.used))
         self.ranges = dict.fromkeys(self.names, (np.inf, -np.inf))
 
     def add(self, season: xr.Dataset, coverage: xr.DataArray, area: xr.DataArray) -> None:

@@ -39,7 +39,7 @@ def response_document(
     InputError
         If an index does not vary.
     """
-    names = list(dict.fromkeys(term.index for term in found.terms.values()))
+    names = list(dict.fromkeys(index for term in found.terms.values() for index in term.used))
     for name in names:
         low, high = sample.ranges[name]
         if not low < high:

@@ -15,6 +15,7 @@ from stook.regions.kernels import add_areas, add_flagged
 from stook.yields.draws import DrawTotals
 from stook.yields.response import Response
 from stook.yields.response_terms import design_matrix
+from stook.yields.technology import TECHNOLOGY
 
 COMBINED = "all"
 """System name of the combination of the water systems of a crop."""
@@ -159,8 +160,7 @@ def system_totals(
         weights[:, reason != 0] = 0.0
         if not weights.any():
             continue
-        needed = [term.index for term in response.terms.values()]
-        season = grids.season[list(dict.fromkeys(needed))].isel(lat=rows).load()
+        season = grids.season[response.used_indices].isel(lat=rows).load()
         design = design_matrix(response, season)[used]
         valid = np.isfinite(design).all(axis=2)
         sums.add(design, valid, layer["baseline_yield"].values.ravel()[used], weights)
@@ -182,7 +182,9 @@ def _bands(
         yield slice(start, min(start + lines, rows))
 
 
-def totals_table(systems: Mapping[str, Totals]) -> pd.DataFrame:
+def totals_table(
+    systems: Mapping[str, Totals], technology: pd.Series | None = None
+) -> pd.DataFrame:
     """Return the totals of a crop as a table.
 
     Parameters
@@ -190,12 +192,15 @@ def totals_table(systems: Mapping[str, Totals]) -> pd.DataFrame:
     systems
         By name, in the order of the assessment; of more than one, the combination `COMBINED`
         follows.
+    technology
+        Factor of the production by year; none where it is constant.
 
     Returns
     -------
     DataFrame
-        Columns `COLUMNS`, sorted by draw (0 is central), system, region, year. A share of no area
-        is NaN, and so is that of a year without production.
+        Columns `COLUMNS`, and the technology factor if there is one; sorted by draw (0 is
+        central), system, region, year. A share of no area is NaN, and so is that of a year without
+        production.
     """
     parts = dict(systems)
     if len(parts) > 1:
@@ -207,7 +212,11 @@ def totals_table(systems: Mapping[str, Totals]) -> pd.DataFrame:
     frames = [
         _rows(totals, draw, system) for draw in range(draws) for system, totals in parts.items()
     ]
-    return pd.concat(frames, ignore_index=True)[COLUMNS]
+    table = pd.concat(frames, ignore_index=True)[COLUMNS]
+    if technology is not None:
+        table[TECHNOLOGY] = technology.loc[table["year"]].to_numpy()
+        table["production_t"] *= table[TECHNOLOGY]
+    return table
 
 
 def _rows(totals: Totals, draw: int, system: str) -> pd.DataFrame:

@@ -9,6 +9,7 @@ from stook.assessment.schema import Assessment, Layer
 from stook.assessment.variables import series_variables
 from stook.season.definition import describe, unit_of
 from stook.yields.response import PiecewiseLinear, Response
+from stook.yields.technology import ConstantTechnology, describe_technology
 
 Responses = Mapping[tuple[str, str], Response]
 _VARIABLES = ("tas", "tasmin", "tasmax", "pr", "rsds", "hurs")
@@ -48,11 +49,8 @@ def general(assessment: Assessment) -> list[tuple[str, str]]:
             "Harvested area",
             "Held at its baseline, pixel by pixel. Production changes with yield alone.",
         ),
-        (
-            "Technology",
-            "Held constant. No breeding, no further inputs, no adaptation by farmers.",
-        ),
-        ("CO2", "The effect of rising CO2 on crops is not included."),
+        ("Technology", _technology(assessment)),
+        ("CO2", _co2(assessment)),
         (
             "Crop calendar",
             "Planting and maturity dates stay as they are; no shift with the climate.",
@@ -137,6 +135,41 @@ def crop_inputs(assessment: Assessment) -> list[tuple[str, str, str, str, str]]:
     return rows
 
 
+def _co2(assessment: Assessment) -> str:
+    spec = assessment.co2
+    if spec is None or spec.use == "off":
+        return "The effect of rising CO2 on crops is not included."
+    effects = "; ".join(
+        f"{crop} {one.percent:g} % ({one.low:g} to {one.high:g} %) from {one.ppm[0]:g} to "
+        f"{one.ppm[1]:g} ppm ({one.source})"
+        for crop, one in spec.crops.items()
+    )
+    how = {"central": "the central effect in every draw", "drawn": "an effect drawn for each draw"}
+    others = [crop for crop in assessment.crops if crop not in spec.crops]
+    without = f" None on {', '.join(others)}." if others else ""
+    return (
+        f"The effect of rising CO2 on yields is included, {how[spec.use]}, as a power of the "
+        f"concentration ({spec.file.name}): {effects}.{without} It is not in the observed impact. "
+        "Published effects disagree: compare with a run without it."
+    )
+
+
+def _technology(assessment: Assessment) -> str:
+    paths = {
+        crop: describe_technology(spec.technology)
+        for crop, spec in assessment.crops.items()
+        if not isinstance(spec.technology, ConstantTechnology)
+    }
+    if not paths:
+        return "Held constant. No breeding, no further inputs, no adaptation by farmers."
+    given = "; ".join(f"{crop}: {path}" for crop, path in paths.items())
+    return (
+        "Changes, shortfalls, trends, and the production and people supplied beside them are at "
+        "the technology of the baseline: what climate alone does. Yields and production by year "
+        f"hold the path given ({given}). No adaptation by farmers to the climate."
+    )
+
+
 def _layer(layer: Layer) -> str:
     unit = f" {layer.unit}" if layer.unit else ""
     if layer.value is not None:
@@ -153,17 +186,22 @@ def response_texts(responses: Responses) -> list[ResponseText]:
 def _response_text(crop: str, system: str, response: Response) -> ResponseText:
     terms = []
     for name, term in response.terms.items():
-        index = response.indices[term.index]
+        indices = " times ".join(describe(response.indices[index]) for index in term.used)
         knots = ""
         if isinstance(term, PiecewiseLinear):
             knots = f" (knots {', '.join(f'{knot:g}' for knot in term.knots)})"
         values = ", ".join(f"{value:.4g}" for value in term.coefficients)
-        terms.append(f"{name}: {term.form}{knots} in {describe(index)}; coefficients {values}")
+        terms.append(f"{name}: {term.form}{knots} in {indices}; coefficients {values}")
     ranges = [
         f"{describe(response.indices[name])}: {low:g} to {high:g} {unit_of(response.indices[name])}"
         for name, (low, high) in response.estimation_range.items()
         if name in response.indices
     ]
+    beyond = {
+        "flag": "beyond these ranges the terms are followed as they are",
+        "hold": "beyond these ranges the marginal effect of each index is held at the edge",
+    }[response.extrapolation]
+    ranges.append(beyond)
     link = {
         "log": "log: terms add up to the logarithm of yield",
         "level": "level: terms add up to yield, t/ha",

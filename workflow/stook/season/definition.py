@@ -71,14 +71,35 @@ class WetDays(_Definition):
     wet_day: float = Field(1.0, gt=0, description="precipitation of a wet day, mm/day")
 
 
+class LargestTotal(_Definition):
+    """Largest precipitation total of consecutive days."""
+
+    measure: Literal["largest-total"]
+    days: int = Field(5, ge=1, le=365, description="length of the run of days")
+
+
 class VapourPressureDeficit(_Definition):
     """Mean vapour pressure deficit from tasmin, tasmax and hurs (FAO-56), kPa."""
 
     measure: Literal["vapour-pressure-deficit"]
 
 
+class Concentration(_Definition):
+    """Logarithm of the year's CO2 concentration over a reference; not written in a document."""
+
+    measure: Literal["co2"] = "co2"
+    reference: float = Field(description="ppm")
+
+
 IndexDefinition = Annotated[
-    DegreeDays | Mean | Total | DaysAbove | DrySpell | WetDays | VapourPressureDeficit,
+    DegreeDays
+    | Mean
+    | Total
+    | DaysAbove
+    | DrySpell
+    | WetDays
+    | LargestTotal
+    | VapourPressureDeficit,
     Field(discriminator="measure"),
 ]
 
@@ -107,7 +128,7 @@ def unit_of(definition: IndexDefinition) -> str:
             return "degC day"
         case Mean(variable=variable):
             return {"pr": "mm day-1", "rsds": "W m-2", "hurs": "%"}.get(variable, "degC")
-        case Total():
+        case Total() | LargestTotal():
             return "mm"
         case VapourPressureDeficit():
             return "kPa"
@@ -131,6 +152,8 @@ def describe(definition: IndexDefinition) -> str:
             text = f"days with {variable} above {threshold:g} {unit}"
         case DrySpell(wet_day=wet_day):
             text = f"longest run of days below {wet_day:g} mm day-1"
+        case LargestTotal(days=days):
+            text = f"largest {days}-day precipitation total"
         case WetDays(wet_day=wet_day):
             text = f"days of at least {wet_day:g} mm day-1"
         case _:

@@ -20,6 +20,7 @@ from stook.season.definition import (
     DegreeDays,
     DrySpell,
     IndexDefinition,
+    LargestTotal,
     Mean,
     Total,
     VapourPressureDeficit,
@@ -32,6 +33,7 @@ from stook.season.kernels import (
     season_counts,
     season_degree_days,
     season_dry_spells,
+    season_largest_totals,
     season_sums,
     season_vapour_pressure_deficits,
     step_deficits,
@@ -41,7 +43,7 @@ from stook.season.windows import Seasons, SeriesTime
 Phases = Mapping[str, tuple[float, float]]
 """Growth phases as fractions of the season, by name."""
 
-_DAILY = (DegreeDays, DaysAbove, DrySpell, WetDays)
+_DAILY = (DegreeDays, DaysAbove, DrySpell, WetDays, LargestTotal)
 _STANDARD_NAMES = {
     "tas": "air_temperature",
     "tasmin": "air_temperature",
@@ -252,6 +254,8 @@ def season_index(
             return season_vapour_pressure_deficits(*given, first, end) / (end - first)
         case DrySpell(wet_day=wet_day):
             return season_dry_spells(series["pr"], *seasons.days(), wet_day)
+        case LargestTotal(days=days):
+            return season_largest_totals(series["pr"], *seasons.days(), days)
         case _:
             counted = _daily_sums(definition, series, *seasons.days())
             return counted * (seasons.nominal / (seasons.end - seasons.begin))
@@ -321,7 +325,7 @@ def _attributes(definition: IndexDefinition) -> dict[str, str]:
             attributes["standard_name"] = _STANDARD_NAMES[variable]
             if variable.startswith("tas"):
                 attributes["units_metadata"] = "temperature: on_scale"
-        case Total():
+        case Total() | LargestTotal():
             attributes["standard_name"] = "lwe_thickness_of_precipitation_amount"
         case VapourPressureDeficit():
             attributes["standard_name"] = "water_vapor_saturation_deficit_in_air"

@@ -176,6 +176,38 @@ def season_dry_spells(
     return longest
 
 
+@njit(cache=True, nogil=True)
+def season_largest_totals(
+    rain: np.ndarray, first: np.ndarray, end: np.ndarray, length: int
+) -> np.ndarray:  # pragma: no cover - compiled
+    """Return the largest sum of `length` consecutive days of every season, float64 (year, pixel).
+
+    All days of a run lie in the season; one that is shorter than a run has no value. Each run is
+    summed by itself, in the order of its days.
+    """
+    years, pixels = first.shape
+    largest = np.zeros((years, pixels))
+    total = np.empty(pixels)
+    for year in range(years):
+        start, stop = _span(first[year], end[year], rain.shape[0])
+        for day in range(start + length - 1, stop):
+            total[:] = 0.0
+            for one in range(day - length + 1, day + 1):
+                for pixel in range(pixels):
+                    total[pixel] += rain[one, pixel]
+            for pixel in range(pixels):
+                inside = (first[year, pixel] <= day - length + 1) & (day < end[year, pixel])
+                best = largest[year, pixel]
+                # A missing value stays: no comparison with it is false.
+                larger = inside & (best == best) & (not total[pixel] <= best)
+                largest[year, pixel] = total[pixel] if larger else best
+        for pixel in range(pixels):
+            if end[year, pixel] - first[year, pixel] < length:
+                largest[year, pixel] = np.nan
+    _blank(largest, first, end, rain.shape[0])
+    return largest
+
+
 @njit(cache=True, nogil=True, error_model="numpy")
 def season_vapour_pressure_deficits(
     low: np.ndarray, high: np.ndarray, humidity: np.ndarray, first: np.ndarray, end: np.ndarray

@@ -14,8 +14,8 @@ from stook.season.definition import IndexDefinition, Mean
 from stook.trend import kernels
 from stook.trend.impact_kernels import logarithmic_mean
 from stook.trend.series import TrendOptions, same_years
-from stook.yields.response import Response
-from stook.yields.response_terms import term_columns
+from stook.yields.response import Product, Ranges, Response, Term
+from stook.yields.response_terms import response_columns, term_columns, term_slices
 
 
 @dataclass(frozen=True)
@@ -111,13 +111,30 @@ def detrend(
     return weather
 
 
-def design(response: Response, series: Mapping[str, np.ndarray]) -> list[np.ndarray]:
-    """Return the design columns of a response, in document order, each shaped like a series."""
-    return [
-        column
-        for term in response.terms.values()
-        for column in term_columns(term, series[term.index])
-    ]
+def index_changes(
+    term: Term,
+    actual: Mapping[str, np.ndarray],
+    detrended: Mapping[str, np.ndarray],
+    held: Ranges | None,
+) -> dict[str, list[np.ndarray]]:
+    """Return what each index of a term does to its design columns, actual less detrended.
+
+    That of a product is split between its two indices: each changes alone, with the other as it
+    was and without its trend, and the mean of both counts (Shapley 1953, as in Shorrocks 2013, J.
+    Econ. Inequal. 11, 99-126). The parts add up to the change of the column.
+    """
+    if not isinstance(term, Product):
+        pair = (term_columns(term, side, held) for side in (actual, detrended))
+        return {term.index: [one - other for one, other in zip(*pair, strict=True)]}
+    parts = {}
+    for own, other in (term.indices, term.indices[::-1]):
+        changed = []
+        for side in (actual, detrended):
+            after = term_columns(term, {own: actual[own], other: side[other]}, held)
+            before = term_columns(term, {own: detrended[own], other: side[other]}, held)
+            changed.append(after[0] - before[0])
+        parts[own] = [0.5 * (changed[0] + changed[1])]
+    return parts
 
 
 def impact_series(response: Response, coefficients: np.ndarray, weather: Weather) -> np.ndarray:
@@ -125,9 +142,10 @@ def impact_series(response: Response, coefficients: np.ndarray, weather: Weather
 
     The sum over the indices of sensitivity times index. The sensitivity of a pixel to an index is
     the trend of the difference that its terms make to log yield, between actual and detrended
-    weather, over the trend of the index. The least-squares slope of the sum is thus the slope of
-    the log ratio of the two yields. Under a level link a yield may be zero; the difference of such
-    a year is counted relative to the mean yield. A pixel with too few years is NaN.
+    weather (`index_changes`), over the trend of the index. The least-squares slope of the sum is
+    thus the slope of the log ratio of the two yields. Under a level link a yield may be zero; the
+    difference of such a year is counted relative to the mean yield. A pixel with too few years is
+    NaN.
 
     Parameters
     ----------
@@ -140,20 +158,24 @@ def impact_series(response: Response, coefficients: np.ndarray, weather: Weather
     """
     shape = weather.valid.shape
     sides = (weather.actual, weather.detrended)
-    columns = list(zip(*(design(response, side) for side in sides), strict=True))
     scale = np.ones(shape)
     if response.link == "level":
         levels = [np.full(shape, response.intercept), np.full(shape, response.intercept)]
-        for coefficient, both in zip(coefficients, columns, strict=True):
-            for level, column in zip(levels, both, strict=True):
+        for level, side in zip(levels, sides, strict=True):
+            for coefficient, column in zip(
+                coefficients, response_columns(response, side), strict=True
+            ):
                 level += coefficient * column
         scale = logarithmic_mean(*levels)
         usual = mean_of_years(np.maximum(levels[1], 0.0))
         scale = np.where(np.isnan(scale), np.where(usual > 0, usual, 1.0), scale)
     changes = {name: np.zeros(slopes.shape) for name, slopes in weather.slopes.items()}
-    names = [term.index for term in response.terms.values() for _ in term.coefficients]
-    for name, coefficient, (actual, detrended) in zip(names, coefficients, columns, strict=True):
-        changes[name] += coefficient * weather.trends((actual - detrended) / scale)
+    slices = term_slices(response)
+    for name, term in response.terms.items():
+        own = coefficients[slices[name]]
+        for index, columns in index_changes(term, *sides, response.held).items():
+            for coefficient, column in zip(own, columns, strict=True):
+                changes[index] += coefficient * weather.trends(column / scale)
     result = np.zeros(shape)
     for name, change in changes.items():
         slopes = weather.slopes[name]

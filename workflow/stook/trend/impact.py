@@ -20,7 +20,6 @@ from stook.regions.kernels import add_areas
 from stook.regions.totals import COMBINED, SystemGrids, region_weights
 from stook.trend.detrend import (
     Weather,
-    design,
     detrend,
     impact_series,
     lowest_value,
@@ -31,6 +30,7 @@ from stook.trend.kernels import area_sums
 from stook.trend.series import TrendOptions, draw, series_trends
 from stook.yields.draws import LANES, DrawTotals
 from stook.yields.response import Response
+from stook.yields.response_terms import response_columns
 
 RECENT_YEARS = 10
 """Last years of a period whose mean production is given."""
@@ -168,7 +168,7 @@ def blocks(
         Draws whose yields are held of every pixel; sets the size of a band.
     """
     response = setting.response
-    needed = list(dict.fromkeys(term.index for term in response.terms.values()))
+    needed = response.used_indices
     lowest = {name: lowest_value(response.indices[name]) for name in needed}
     years, inside = axis.years, axis.inside
     held = len(axis.baseline) * (4 * setting.coefficients.shape[1] + 2 * max(draws, LANES))
@@ -185,7 +185,9 @@ def blocks(
         columns = [
             np.concatenate([one.T, other.T], axis=1)
             for one, other in zip(
-                design(response, series), design(response, weather.detrended), strict=True
+                response_columns(response, series),
+                response_columns(response, weather.detrended),
+                strict=True,
             )
         ]
         joint = np.stack(columns, axis=-1)

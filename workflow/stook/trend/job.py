@@ -26,6 +26,7 @@ from stook.trend.periods import is_covered, trend_periods
 from stook.trend.pixels import Domain, Quantity, join_tables, map_trends
 from stook.trend.regions import COLUMNS, regional_trends, regional_yields
 from stook.trend.series import TrendOptions
+from stook.yields.technology import climate_yield
 
 _CHUNKS = {"year": -1, "lat": PIXEL_CHUNK, "lon": -1}
 
@@ -52,10 +53,11 @@ def pixels(assessment: Assessment, simulation: str, crop: str, system: str) -> N
         options = TrendOptions.of(assessment)
         found = []
         for quantity in _quantities(assessment, crop, system):
-            dataset = yields if quantity.name == "yield" else season
+            own = quantity.name == "yield"
+            dataset = yields if own else season
             found.append(
                 map_trends(
-                    dataset[quantity.name],
+                    climate_yield(yields) if own else season[quantity.name],
                     dataset["reason"].values,
                     quantity,
                     domain,

@@ -13,6 +13,7 @@ from stook.trend.detrend import mean_of_years
 from stook.trend.periods import is_covered
 from stook.trend.pixels import YEARS_PER_DECADE
 from stook.trend.series import TrendOptions, draw, series_trends
+from stook.yields.technology import TECHNOLOGY
 
 COLUMNS = [
     "crop",
@@ -34,7 +35,9 @@ COLUMNS = [
 
 
 def regional_yields(totals: pd.DataFrame) -> pd.DataFrame:
-    """Return central yields, t/ha: index year, columns (region, system) in order of appearance.
+    """Return central yields, t/ha, at the technology of the baseline.
+
+    Index year, columns (region, system) in order of appearance.
 
     Parameters
     ----------
@@ -43,7 +46,8 @@ def regional_yields(totals: pd.DataFrame) -> pd.DataFrame:
     """
     central = totals[totals["draw"] == CENTRAL_DRAW]
     grown = central[central["area_ha"] > 0]
-    values = grown.assign(value=grown["production_t"] / grown["area_ha"])
+    production = grown["production_t"] / grown.get(TECHNOLOGY, 1.0)
+    values = grown.assign(value=production / grown["area_ha"])
     table = values.pivot_table(
         index="year", columns=["region", "system"], values="value", sort=False, dropna=False
     )

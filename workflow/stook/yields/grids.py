@@ -5,13 +5,15 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import pandas as pd
 import xarray as xr
 
 from stook.grids.missing import Reason, reason_attributes
 from stook.season.definition import YEAR_ATTRIBUTES
 from stook.yields.kernels import TERMS_AT_ONCE, padded, term_effects, yield_ratios
 from stook.yields.response import Response
-from stook.yields.response_terms import term_columns, term_slices
+from stook.yields.response_terms import response_columns, term_slices
+from stook.yields.technology import TECHNOLOGY
 
 BASELINE_SHARE = 2 / 3
 """Least share of the baseline years that need a value (a choice of this program)."""
@@ -34,6 +36,7 @@ def yield_grids(
     response: Response,
     coefficients: np.ndarray,
     baseline: tuple[int, int],
+    technology: pd.Series | None = None,
 ) -> xr.Dataset:
     """Return yield ratio, yield, the effect of each term and the extrapolation flags.
 
@@ -52,19 +55,22 @@ def yield_grids(
         float64, shape (k,), in document order.
     baseline
         First and last year of the baseline.
+    technology
+        Factor of the yield by year; none where it is constant.
 
     Returns
     -------
     Dataset
         yield_ratio (1), yield (t ha-1), effect_<term> (change of log yield, or t ha-1 under a
         level link) float64 (year, lat, lon); extrapolated, integer bits (year, lat, lon), the
-        first index of the document is bit 1; reason int8 (lat, lon).
+        first index of the document is bit 1; reason int8 (lat, lon); with a technology path,
+        technology (year), which is in the yield and in nothing else.
     """
     years = indices["year"].values
     inside = (years >= baseline[0]) & (years <= baseline[1])
     fewest = int(np.ceil(BASELINE_SHARE * (baseline[1] - baseline[0] + 1)))
     model = _Model(response, np.asarray(coefficients, dtype=np.float64), inside, fewest)
-    names = used_indices(response)
+    names = response.used_indices
     grids = [indices[name] for name in names]
     layers = [baseline_yield, reason, indices["reason"]]
     if grids[0].chunks:
@@ -88,29 +94,29 @@ def yield_grids(
         for name, grid in zip(attributes, results[:-1], strict=True)
     }
     data["reason"] = results[-1].assign_attrs(reason_attributes())
+    if technology is not None:
+        factor = xr.DataArray(technology.loc[years].to_numpy(), dims="year")
+        data["yield"] = (data["yield"] * factor).assign_attrs(attributes["yield"])
+        data["yield"].attrs["comment"] = (
+            "baseline yield times yield_ratio times technology; harvested area as in the baseline"
+        )
+        data[TECHNOLOGY] = factor.assign_attrs(long_name="technology factor", units="1")
     dataset = xr.Dataset(data).drop_vars("crop_system", errors="ignore")
     return dataset.assign_coords(year=("year", years, YEAR_ATTRIBUTES))
-
-
-def used_indices(response: Response) -> list[str]:
-    """Return the indices that some term uses, in document order."""
-    used = {term.index for term in response.terms.values()}
-    return [name for name in response.indices if name in used]
 
 
 def _block(*arrays: np.ndarray, model: _Model) -> tuple[np.ndarray, ...]:
     """Return ratio, yield, effects, flags (lat, lon, year) and reason (lat, lon) of a block."""
     shape = arrays[0].shape
     baseline_yield, reason, season_reason = (one.ravel() for one in arrays[:3])
-    names = used_indices(model.response)
+    names = model.response.used_indices
     years = len(model.baseline)
     there = np.flatnonzero(reason == int(Reason.VALID))
     index = {
         name: np.ascontiguousarray(grid.reshape(-1, years)[there], dtype=np.float64)
         for name, grid in zip(names, arrays[3:], strict=True)
     }
-    terms = model.response.terms.values()
-    design = np.stack([c for term in terms for c in term_columns(term, index[term.index])], -1)
+    design = np.stack(response_columns(model.response, index), -1)
     valid = np.isfinite(design).all(axis=-1)
     ratio, found = _ratios(model, design, valid)
     found = np.where(valid.any(axis=1) | (season_reason[there] == 0), found, season_reason[there])
@@ -184,8 +190,9 @@ def _attributes(response: Response) -> dict[str, dict[str, object]]:
         },
     }
     for name, term in response.terms.items():
+        indices = " and ".join(term.used)
         attributes[f"effect_{name}"] = {
-            "long_name": f"effect of {term.index} ({term.form}) against its baseline mean",
+            "long_name": f"effect of {indices} ({term.form}) against its baseline mean",
             "units": unit,
             "comment": what,
         }
@@ -193,6 +200,10 @@ def _attributes(response: Response) -> dict[str, dict[str, object]]:
     names = list(response.indices)
     attributes["extrapolated"] = {
         "long_name": "indices outside their estimation range",
+        "comment": {
+            "flag": "the response is followed beyond the range",
+            "hold": "marginal effects are held beyond the range",
+        }[response.extrapolation],
         "flag_masks": np.array([1 << bit for bit in range(len(names))], dtype=kind),
         "flag_meanings": " ".join(f"{name}_outside" for name in names),
     }

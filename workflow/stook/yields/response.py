@@ -7,6 +7,7 @@ carries the definition of every index it uses, since a coefficient means nothing
 from __future__ import annotations
 
 import re
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -15,12 +16,25 @@ from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 from stook.season.definition import IndexDefinition
 
+Extrapolation = Literal["flag", "hold"]
+"""Beyond the estimation range: follow the response as it is, or hold its marginal effects."""
+
+Ranges = Mapping[str, tuple[float, float]]
+"""Lowest and highest value by index."""
+
 
 class _Strict(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
 
-class Linear(_Strict):
+class _OfOneIndex(_Strict):
+    @property
+    def used(self) -> tuple[str, ...]:
+        """The indices of the term."""
+        return (self.index,)  # type: ignore[attr-defined]  # a field of every form
+
+
+class Linear(_OfOneIndex):
     """``coefficient * index``."""
 
     form: Literal["linear"]
@@ -33,7 +47,7 @@ class Linear(_Strict):
         return (self.coefficient,)
 
 
-class Quadratic(_Strict):
+class Quadratic(_OfOneIndex):
     """``c1 * index + c2 * index**2``."""
 
     form: Literal["quadratic"]
@@ -41,7 +55,7 @@ class Quadratic(_Strict):
     coefficients: tuple[float, float]
 
 
-class PiecewiseLinear(_Strict):
+class PiecewiseLinear(_OfOneIndex):
     """A continuous line with a slope of its own below, between and above the knots."""
 
     form: Literal["piecewise-linear"]
@@ -61,7 +75,31 @@ class PiecewiseLinear(_Strict):
         return self
 
 
-Term = Annotated[Linear | Quadratic | PiecewiseLinear, Field(discriminator="form")]
+class Product(_Strict):
+    """``coefficient * index * other index``; each may have a term of its own besides."""
+
+    form: Literal["product"]
+    indices: tuple[str, str] = Field(description="the two that are multiplied")
+    coefficient: float
+
+    @model_validator(mode="after")
+    def _of_two(self) -> Product:
+        if self.indices[0] == self.indices[1]:
+            raise ValueError(f"indices must differ; the square of {self.indices[0]} is quadratic")
+        return self
+
+    @property
+    def coefficients(self) -> tuple[float, ...]:
+        """The coefficients in the order of the design columns."""
+        return (self.coefficient,)
+
+    @property
+    def used(self) -> tuple[str, ...]:
+        """The indices of the term."""
+        return self.indices
+
+
+Term = Annotated[Linear | Quadratic | PiecewiseLinear | Product, Field(discriminator="form")]
 
 
 class Response(_Strict):
@@ -90,6 +128,11 @@ class Response(_Strict):
     estimation_range: dict[str, tuple[float, float]] = Field(
         description="lowest and highest value of each index in the data it was estimated from"
     )
+    extrapolation: Extrapolation = Field(
+        "flag",
+        description="beyond that range: flag follows the terms, hold keeps their marginal effect "
+        "at its edge; flagged both ways",
+    )
     citation: str = Field(description="where the response is published")
     note: str = Field(description="where the numbers come from")
 
@@ -99,13 +142,12 @@ class Response(_Strict):
             if not re.fullmatch(r"[A-Za-z][A-Za-z0-9_]*", name):
                 raise ValueError(f"name {name!r} must be letters, digits and '_' only")
         for name, term in self.terms.items():
-            if term.index not in self.indices:
+            if unknown := [index for index in term.used if index not in self.indices]:
                 raise ValueError(
-                    f"term {name} uses index {term.index}, which is not under indices "
+                    f"term {name} uses index {unknown[0]}, which is not under indices "
                     f"({', '.join(self.indices)})"
                 )
-        used = {term.index for term in self.terms.values()}
-        if missing := sorted(used - set(self.estimation_range)):
+        if missing := sorted(set(self.used_indices) - set(self.estimation_range)):
             raise ValueError(f"estimation_range is missing for {', '.join(missing)}")
         for name, (low, high) in self.estimation_range.items():
             if high <= low:
@@ -131,6 +173,17 @@ class Response(_Strict):
             spread = np.sqrt(np.clip(np.diag(matrix), 1e-300, None))
             if np.linalg.eigvalsh(matrix / np.outer(spread, spread)).min() < -1e-9:
                 raise ValueError("covariance must have no negative eigenvalue")
+
+    @property
+    def used_indices(self) -> list[str]:
+        """The indices that some term uses, in document order."""
+        used = {index for term in self.terms.values() for index in term.used}
+        return [name for name in self.indices if name in used]
+
+    @property
+    def held(self) -> Ranges | None:
+        """The ranges beyond which marginal effects are held; None if they are not."""
+        return self.estimation_range if self.extrapolation == "hold" else None
 
     @property
     def coefficient_vector(self) -> np.ndarray:

@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from stook.audit.plain.yields import term_value
 from stook.yields.response import Response
 
 
@@ -48,7 +49,7 @@ def pixel_impact(
     baseline_yield
         t/ha.
     """
-    used = {term.index for term in response.terms.values()}
+    used = {name for term in response.terms.values() for name in term.used}
     there = np.array(
         [all(np.isfinite(indices[name][t]) for name in used) for t in range(len(years))]
     )
@@ -73,8 +74,7 @@ def pixel_impact(
         # What this index does to log yield, trend over trend.
         effect = np.zeros(len(years))
         for t in np.flatnonzero(fitted).tolist():
-            effect[t] = _of_index(response, coefficients, indices, name, t)
-            effect[t] -= _of_index(response, coefficients, detrended, name, t)
+            effect[t] = _of_index(response, coefficients, indices, detrended, name, t)
             if response.link == "level":
                 one, two = both[0][t], both[1][t]
                 effect[t] /= one if one == two else (one - two) / np.log(one / two)
@@ -103,30 +103,37 @@ def _may_be_negative(response: Response, name: str) -> bool:
 def _predictor(
     response: Response, coefficients: np.ndarray, indices: dict[str, np.ndarray], t: int
 ) -> float:
-    names = dict.fromkeys(term.index for term in response.terms.values())
-    parts = (_of_index(response, coefficients, indices, name, t) for name in names)
-    return response.intercept + sum(parts)
+    total, place = response.intercept, 0
+    for term in response.terms.values():
+        own = coefficients[place : place + len(term.coefficients)].tolist()
+        place += len(term.coefficients)
+        total += term_value(response, term, own, [indices[name][t] for name in term.used])
+    return total
 
 
 def _of_index(
-    response: Response, coefficients: np.ndarray, indices: dict[str, np.ndarray], name: str, t: int
+    response: Response,
+    coefficients: np.ndarray,
+    actual: dict[str, np.ndarray],
+    detrended: dict[str, np.ndarray],
+    name: str,
+    t: int,
 ) -> float:
-    """Add up the terms that use one index."""
+    """Add up what one index alone changes in the terms that use it."""
     total, place = 0.0, 0
     for term in response.terms.values():
-        own = coefficients[place : place + len(term.coefficients)]
+        own = coefficients[place : place + len(term.coefficients)].tolist()
         place += len(term.coefficients)
-        if term.index != name:
+        if name not in term.used:
             continue
-        x = indices[name][t]
-        if term.form == "linear":
-            total += own[0] * x
-        elif term.form == "quadratic":
-            total += own[0] * x + own[1] * x**2
-        else:
-            # A broken line through the origin: one slope per segment.
-            total += own[0] * min(x, term.knots[0])
-            for number, knot in enumerate(term.knots):
-                above = term.knots[number + 1] if number + 1 < len(term.knots) else np.inf
-                total += own[number + 1] * max(min(x, above) - knot, 0.0)
+        changes = []
+        for other in (actual, detrended):  # the other index of a product, either way
+            one, two = (
+                [(side if index == name else other)[index][t] for index in term.used]
+                for side in (actual, detrended)
+            )
+            changes.append(
+                term_value(response, term, own, one) - term_value(response, term, own, two)
+            )
+        total += sum(changes) / 2
     return total

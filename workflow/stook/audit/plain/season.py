@@ -17,6 +17,7 @@ from stook.season.definition import (
     DegreeDays,
     DrySpell,
     IndexDefinition,
+    LargestTotal,
     Mean,
     Total,
     VapourPressureDeficit,
@@ -86,6 +87,8 @@ def season_index(
             return _share([v["pr"] for v in values], wet_day, False) * real_days
         case DrySpell(wet_day=wet_day):
             return longest_dry_spell([v["pr"] for v in values], wet_day)
+        case LargestTotal(days=days):
+            return largest_total([v["pr"] for v in values], days)
         case _:
             return sum(_level(definition, v) for v in values) / len(values)
 
@@ -150,6 +153,13 @@ def longest_dry_spell(rain: Sequence[float], wet_day: float) -> float:
         return math.nan
     text = "".join("d" if value < wet_day else "w" for value in rain)
     return float(max(len(run) for run in text.split("w")))
+
+
+def largest_total(rain: Sequence[float], days: int) -> float:
+    """Return the largest total of so many consecutive days; NaN if a day is missing, or too few."""
+    if len(rain) < days or any(math.isnan(value) for value in rain):
+        return math.nan
+    return max(sum(rain[start : start + days]) for start in range(len(rain) - days + 1))
 
 
 def _share(values: Sequence[float], threshold: float, strictly: bool) -> float:

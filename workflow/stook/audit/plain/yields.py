@@ -12,7 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from stook.randomness import generator
-from stook.yields.response import Linear, Quadratic, Response, Term
+from stook.yields.response import Linear, Product, Quadratic, Response, Term
+from stook.yields.technology import Technology
 
 
 @dataclass(frozen=True)
@@ -59,7 +60,7 @@ def yields_of_pixel(
     baseline_yield
         t/ha.
     """
-    used = [name for name in response.indices if any(t.index == name for t in terms_of(response))]
+    used = [name for name in response.indices if any(name in t.used for t in terms_of(response))]
     years = [
         year
         for year in indices[used[0]]
@@ -69,7 +70,10 @@ def yields_of_pixel(
     left = list(coefficients)
     for name, term in response.terms.items():
         own = [left.pop(0) for _ in term.coefficients]
-        parts[name] = {year: term_value(term, own, indices[term.index][year]) for year in years}
+        parts[name] = {
+            year: term_value(response, term, own, [indices[index][year] for index in term.used])
+            for year in years
+        }
     level: dict[int, float] = {}
     for year in years:
         h = response.intercept + sum(part[year] for part in parts.values())
@@ -97,8 +101,53 @@ def terms_of(response: Response) -> list[Term]:
     return list(response.terms.values())
 
 
-def term_value(term: Term, coefficients: Sequence[float], x: float) -> float:
-    """Return one term of the predictor at an index value."""
+def term_value(
+    response: Response, term: Term, coefficients: Sequence[float], values: Sequence[float]
+) -> float:
+    """Return one term of the predictor at the value of its index, or at two for a product.
+
+    Where marginal effects are held, it is the value at the nearest point of the estimation range,
+    and as much for every unit beyond as one unit brings there.
+    """
+    if response.extrapolation == "flag":
+        return _value(term, coefficients, values)
+    ranges = [response.estimation_range[name] for name in term.used]
+    edge = [
+        low if x < low else high if x > high else x
+        for x, (low, high) in zip(values, ranges, strict=True)
+    ]
+    total = _value(term, coefficients, edge)
+    for place, (x, (low, high)) in enumerate(zip(values, ranges, strict=True)):
+        if x != edge[place]:
+            inward = [(low + high) / 2 if at == place else e for at, e in enumerate(edge)]
+            total += (x - edge[place]) * _slope(term, coefficients, edge, inward, place)
+    return total
+
+
+def _slope(
+    term: Term,
+    coefficients: Sequence[float],
+    edge: Sequence[float],
+    inward: Sequence[float],
+    place: int,
+) -> float:
+    """Return the marginal effect of an index at an edge of its range, seen from inside."""
+    if isinstance(term, Linear):
+        return coefficients[0]
+    if isinstance(term, Quadratic):
+        return coefficients[0] + 2 * coefficients[1] * edge[0]
+    if isinstance(term, Product):
+        return coefficients[0] * edge[1 - place]
+    between = [k for k in term.knots if min(edge[0], inward[0]) < k < max(edge[0], inward[0])]
+    nearest = min([*between, inward[0]], key=lambda x: abs(x - edge[0]))
+    rise = _value(term, coefficients, edge) - _value(term, coefficients, [nearest])
+    return rise / (edge[0] - nearest)
+
+
+def _value(term: Term, coefficients: Sequence[float], values: Sequence[float]) -> float:
+    x = values[0]
+    if isinstance(term, Product):
+        return coefficients[0] * x * values[1]
     if isinstance(term, Linear):
         return coefficients[0] * x
     if isinstance(term, Quadratic):
@@ -115,6 +164,27 @@ def is_outside(response: Response, index: str, value: float) -> bool:
     """Return whether an index lies outside the range it was estimated in."""
     low, high = response.estimation_range[index]
     return not low <= value <= high
+
+
+def technology_factor(
+    technology: Technology, year: int, last: int, table: Mapping[int, float]
+) -> float:
+    """Return the technology factor of a year; `table` has the factors of a table by year."""
+    n = year - last
+    if n <= 0 or technology.form == "constant":
+        return 1.0
+    if technology.form == "linear":
+        return 1 + n * technology.rate / 100
+    if technology.form == "levelling-off":
+        gap = (technology.ceiling - 100) / 100
+        return 1 + gap - gap * math.exp(-n * technology.rate / 100 / gap)
+    known = {last: 1.0} | {one: factor for one, factor in table.items() if one > last}
+    before = max(one for one in known if one <= year)
+    after = min(one for one in known if one >= year)
+    if before == after:
+        return known[before]
+    share = (year - before) / (after - before)
+    return known[before] + share * (known[after] - known[before])
 
 
 def drawn_coefficients(response: Response, draws: int, seed: int) -> np.ndarray:
