@@ -20,7 +20,7 @@ QUICK = settings(
 )
 CHOICES = st.fixed_dictionaries(
     {
-        "method": st.sampled_from(["quantile-delta", "quantile", "mean"]),
+        "method": st.sampled_from(["quantile-delta", "quantile", "delta", "mean"]),
         "window_days": st.sampled_from([31, 91, 5, 45, 365]),
         "step_days": st.sampled_from([5, 31, 10]),
         "cdf_years": st.sampled_from([5, 8, 30]),
@@ -100,7 +100,7 @@ def test_monthly_and_annual(seed: int, kind: str, ratio: bool, choice: dict[str,
         compare((axis(1961, 1990), f.part(f.years(1961, 1990)), f), seed, kind, ratio, **choice)
 
 
-@pytest.mark.parametrize("method", ["quantile-delta", "quantile", "mean"])
+@pytest.mark.parametrize("method", ["quantile-delta", "quantile", "delta", "mean"])
 @pytest.mark.parametrize("ratio", [False, True])
 def test_default_options_at_full_length(method: str, ratio: bool) -> None:
     f = days(1981, 2030, "360_day")

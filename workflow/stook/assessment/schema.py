@@ -136,7 +136,7 @@ class Simulations(Section):
         return self
 
 
-Method = Literal["quantile-delta", "quantile", "mean", "none"]
+Method = Literal["quantile-delta", "quantile", "delta", "mean", "none"]
 
 
 class VariableCorrection(Section):
@@ -148,8 +148,10 @@ class VariableCorrection(Section):
     )
     window_days: int = Field(31, ge=1, le=365, description="days of the moving window")
     step_days: int = Field(5, ge=1, le=31, description="days between the centres of windows")
-    cdf_years: int = Field(30, ge=5, description="years of the moving CDF of quantile-delta")
-    cdf_step_years: int = Field(10, ge=1, description="years by which that CDF moves on")
+    cdf_years: int = Field(
+        30, ge=5, description="years of the moving window of quantile-delta and delta"
+    )
+    cdf_step_years: int = Field(10, ge=1, description="years by which that window moves on")
     nodes: int | Literal["all"] = Field("all", description="quantiles kept of each calibration CDF")
     ratio_cap: float = Field(10.0, gt=1, description="largest factor of a ratio correction")
     trace: float = Field(0.05, gt=0, description="pr: below this a day is dry, mm/day")

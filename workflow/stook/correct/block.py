@@ -23,6 +23,7 @@ from stook.correct.setup import (
     DIURNAL_RANGE,
     MEAN_TEMPERATURE,
     PAIR,
+    Change,
     Part,
     Setup,
     Tables,
@@ -102,7 +103,7 @@ def prepare_group(
         split_pair(low, high, mean, difference)
         return {MEAN_TEMPERATURE: mean, DIURNAL_RANGE: difference}
     result = dict(values)
-    if "pr" in group and (choice := setup.correct.choice("pr")).method != "none":
+    if "pr" in group and (choice := setup.correct.choice("pr")).method not in ("none", "delta"):
         filled = values["pr"].copy()
         stream = stream_key(setup.seed, "trace", "pr", source)
         fill_dry(filled, series.day, stream, pixels.keys, choice.trace)
@@ -192,7 +193,32 @@ def map_series(
     correct_pixels(
         o, h, f, *plans, tables.rule, scratch, PROBABILITIES, shown, out, reason, capped, kept
     )
+    if tables.changes:
+        capped[:] = 0
+        for change in tables.changes:
+            _change_record(o, h, f, change, out, reason, capped)
+        out[reason != int(Reason.VALID)] = np.nan
     return out, reason, capped, kept
+
+
+def _change_record(
+    o: np.ndarray,
+    h: np.ndarray,
+    f: np.ndarray,
+    change: Change,
+    out: np.ndarray,
+    reason: np.ndarray,
+    capped: np.ndarray,
+) -> None:
+    """Fill the times of one change with the record, changed as the simulation changes."""
+    record = o.take(change.record, axis=1)
+    if change.tables is not None:
+        window = f.take(change.window, axis=1)
+        record, why, beyond, _ = map_series(window, h, record, change.tables)
+        failed = (reason == int(Reason.VALID)) & (why != int(Reason.VALID))
+        reason[failed] = int(Reason.TOO_FEW_VALUES)
+        capped += beyond
+    out[:, change.at] = record.take(change.source, axis=1)
 
 
 def _to_variables(

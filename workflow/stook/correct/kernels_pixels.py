@@ -27,7 +27,9 @@ from stook.correct.kernels_windows import (
 from stook.grids.missing import Reason
 
 QUANTILE_DELTA, QUANTILE, MEAN = 0, 1, 2
-METHODS = {"quantile-delta": QUANTILE_DELTA, "quantile": QUANTILE, "mean": MEAN}
+METHODS = {"quantile-delta": QUANTILE_DELTA, "quantile": QUANTILE, "mean": MEAN, "delta": MEAN}
+"""Code of each method; `delta` shifts the mean of the record (see `setup.Change`)."""
+
 _MISSING = int(Reason.MISSING_INPUT)
 
 

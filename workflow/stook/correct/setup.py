@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -11,7 +11,7 @@ from stook.assessment.schema import Correct, VariableCorrection
 from stook.correct.kernels_pixels import Rule
 from stook.correct.kernels_windows import Application, Calibration
 from stook.correct.plan import application_plan, calibration_plan, rule_of
-from stook.correct.windows import Series
+from stook.correct.windows import Series, record_times, year_windows
 from stook.errors import InputError
 
 PAIR = ("tasmin", "tasmax")
@@ -43,6 +43,34 @@ class Tables:
     h_plan: Calibration
     f_plan: Application
     rule: Rule
+    changes: tuple[Change, ...] = ()
+
+
+@dataclass(frozen=True)
+class Change:
+    """Years to which `delta` gives the record, changed as the simulation changes.
+
+    Attributes
+    ----------
+    at
+        Their times, of the series to correct.
+    record
+        Times of the reference that are used.
+    source
+        Of each of `at` its place in `record`.
+    window
+        Times of the series to correct, around those years, whose mean is compared with that of the
+        model in the calibration period.
+    tables
+        With the window as reference and the record as the series; None in calibration years, where
+        the record stays as it is.
+    """
+
+    at: np.ndarray
+    record: np.ndarray
+    source: np.ndarray
+    window: np.ndarray
+    tables: Tables | None
 
 
 @dataclass(frozen=True)
@@ -233,7 +261,28 @@ def tables_of(quantity: Quantity, o: Series, h: Series, f: Series) -> Tables:
         calibration_plan(h, choice),
         application_plan(f, choice, int(h.year.min())),
         rule_of(choice, quantity.ratio, quantity.trace, f.step),
+        _changes(quantity, o, h, f) if choice.method == "delta" and len(f) else (),
     )
+
+
+def _changes(quantity: Quantity, o: Series, h: Series, f: Series) -> tuple[Change, ...]:
+    """Return what `delta` does to each part of the series to correct."""
+    choice = quantity.choice
+    source = record_times(o, f)
+    years = year_windows(f, int(h.year.min()), choice.cdf_years, choice.cdf_step_years)
+    calibrated = np.isin(f.year, h.year)
+    mean = replace(quantity, choice=choice.model_copy(update={"method": "mean"}))
+    found = []
+    for number in (-1, *range(years.count)):
+        at = np.flatnonzero(np.where(calibrated, -1, years.own) == number)
+        if not len(at):
+            continue
+        record, places = np.unique(source[at], return_inverse=True)
+        inside = (years.first <= number) & (number < years.first + years.number)
+        window = np.flatnonzero(inside)
+        tables = None if number < 0 else tables_of(mean, f.part(window), h, o.part(record))
+        found.append(Change(at, record, places.ravel(), window, tables))
+    return tuple(found)
 
 
 def _common_years(

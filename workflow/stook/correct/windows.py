@@ -185,6 +185,37 @@ def year_windows(series: Series, anchor: int, width: int, step: int) -> Membersh
     )
 
 
+def record_times(record: Series, series: Series) -> np.ndarray:
+    """Return, for every time of a series, the time of the record that stands for it.
+
+    The years of the record follow each other again and again, its first year standing for its own;
+    within the year it is the nearest position, the earlier of two.
+
+    Parameters
+    ----------
+    record, series
+        Time axes of the same time step.
+
+    Returns
+    -------
+    ndarray
+        Indices of the record, int64, shape (time,).
+    """
+    years = np.unique(record.year)
+    chosen = years[(series.year - years[0]) % len(years)]
+    result = np.empty(len(series), dtype=np.int64)
+    for year in np.unique(chosen):
+        places = np.flatnonzero(record.year == year)
+        at = np.flatnonzero(chosen == year)
+        position, wanted = record.position[places], series.position[at]
+        above = np.clip(np.searchsorted(position, wanted), 1, max(len(places) - 1, 1))
+        above = np.minimum(above, len(places) - 1)
+        below = np.maximum(above - 1, 0)
+        nearer = np.abs(wanted - position[below]) <= np.abs(wanted - position[above])
+        result[at] = places[np.where(nearer, below, above)]
+    return result
+
+
 def minimum_count(minimum_values: int, step: TimeStep) -> int:
     """Return how many values a window needs: `minimum_values` counts days.
 

@@ -86,6 +86,9 @@ def correction(assessment: Assessment) -> list[tuple[str, str]]:
             text += f"; windows of {choice.window_days} days, a step every {choice.step_days}"
         if choice.method == "quantile-delta":
             text += f"; CDF of {choice.cdf_years} years, moved by {choice.cdf_step_years}"
+        if choice.method == "delta":
+            text = f"the record, changed by the simulated change of the mean: {text}"
+            text += f"; means of {choice.cdf_years} years, moved by {choice.cdf_step_years}"
         if variable == "pr" and choice.kind == "ratio":
             text += f"; ratio capped at {choice.ratio_cap:g}, dry below {choice.trace:g} mm/day"
         if variable in ("tasmin", "tasmax"):

@@ -69,10 +69,10 @@ def correct_series(
     trace
         Amount below which a value is dry, 0 where nothing is dry.
     """
+    if choice.method == "delta":
+        return changed_record(o, h, f, choice, ratio)
     result = np.full(len(f.values), np.nan)
-    least = choice.minimum_values
-    if f.times.step != "daily":
-        least = max(10, math.ceil(least / {"monthly": 30, "annual": 365}[f.times.step]))
+    least = fewest(f.times, choice)
     own = np.array([own_window(f.times, i, choice) for i in range(len(result))])
     span = range(int(f.times.year.min()), int(f.times.year.max()) + 1)
     anchor = int(h.times.year.min())
@@ -95,6 +95,54 @@ def correct_series(
                 return np.full(len(result), np.nan)
             for i in np.flatnonzero(mine):
                 result[i] = mapped(float(f.values[i]), so, sh, sf, choice, ratio, trace)
+    return result
+
+
+def fewest(times: PlainTimes, choice: VariableCorrection) -> int:
+    """Return how many values a window needs."""
+    least = choice.minimum_values
+    if times.step == "daily":
+        return least
+    return max(10, math.ceil(least / {"monthly": 30, "annual": 365}[times.step]))
+
+
+def changed_record(
+    o: PlainSeries, h: PlainSeries, f: PlainSeries, choice: VariableCorrection, ratio: bool
+) -> np.ndarray:
+    """Return the record, its years again and again, changed as the mean of the model changes."""
+    result = np.full(len(f.values), np.nan)
+    missing = result.copy()
+    least = fewest(f.times, choice)
+    windows = range(window_count(f.times, choice))
+    before = [sorted_window(h, window, choice) for window in windows]
+    record = [sorted_window(o, window, choice) for window in windows]
+    if min(len(values) for values in before + record) < least:
+        return missing
+    span = range(int(f.times.year.min()), int(f.times.year.max()) + 1)
+    record_years = sorted(set(o.times.year.tolist()))
+    steps: dict[tuple[int, int], list[float]] = {}
+    for i, year in enumerate(f.times.year.tolist()):
+        standing = record_years[(year - record_years[0]) % len(record_years)]
+        places = np.flatnonzero(o.times.year == standing)
+        j = places[np.argmin(np.abs(o.times.position[places] - f.times.position[i]))]
+        if year in h.times.year:
+            result[i] = o.values[j]
+            continue
+        years = moving_years(year, span, int(h.times.year.min()), choice)
+        if years not in steps:
+            inside = (f.times.year >= years[0]) & (f.times.year <= years[1])
+            around = PlainSeries(f.values[inside], f.times.part(inside))
+            after = [sorted_window(around, window, choice) for window in windows]
+            if min(len(values) for values in after) < least:
+                return missing
+            steps[years] = []
+            for late, then in zip(after, before, strict=True):
+                means = [float(np.mean(values, dtype=np.float64)) for values in (late, then)]
+                steps[years].append(
+                    change(*means, choice.ratio_cap) if ratio else means[0] - means[1]
+                )
+        step = steps[years][own_window(o.times, int(j), choice)]
+        result[i] = o.values[j] * step if ratio else o.values[j] + step
     return result
 
 
