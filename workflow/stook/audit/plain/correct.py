@@ -137,10 +137,8 @@ def changed_record(
                 return missing
             steps[years] = []
             for late, then in zip(after, before, strict=True):
-                means = [float(np.mean(values, dtype=np.float64)) for values in (late, then)]
-                steps[years].append(
-                    change(*means, choice.ratio_cap) if ratio else means[0] - means[1]
-                )
+                a, b = (float(np.mean(values, dtype=np.float64)) for values in (late, then))
+                steps[years].append(change(a, b, choice.ratio_cap) if ratio else a - b)
         step = steps[years][own_window(o.times, int(j), choice)]
         result[i] = o.values[j] * step if ratio else o.values[j] + step
     return result
