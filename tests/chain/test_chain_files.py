@@ -22,7 +22,7 @@ KINDS = [
     f"correct/{SIMULATION}/transfer-00.nc",
     f"correct/{SIMULATION}/evaluation-00.nc",
     f"season/{SIMULATION}/barley_rainfed_tile-00.nc",
-    f"season/{SIMULATION}/rice_irrigated_tile-00.nc",
+    f"season/{SIMULATION}/maize_irrigated_tile-00.nc",
     f"yields/{SIMULATION}/maize_rainfed.nc",
     "ensemble/pixels/maize_rainfed_high.nc",
     f"trend/{SIMULATION}/maize_rainfed.nc",

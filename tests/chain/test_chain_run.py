@@ -54,12 +54,12 @@ def test_a_change_of_one_response_reruns_what_it_touches(full):
     done = stook(
         *("run", full.file, "--dry-run"),
         *("--set", f"results={full.root.parent}"),
-        *("--set", "crops.rice.systems.irrigated.phases.ripening=[0.75, 1]"),
+        *("--set", "crops.barley.systems.rainfed.phases.filling=[0.8, 1]"),
     )
     assert done.returncode == 0, done.stderr
     found = [line.split() for line in done.stdout.splitlines()]
     jobs = {" ".join(words[:2]): words[2] for words in found if len(words) > 3}
-    assert jobs["season tile"] == "4"  # of rice, in every simulation
+    assert jobs["season tile"] == "4"  # of barley, in every simulation
     assert jobs["yields grid"] == "4"
     assert not {"prepare tile", "correct tile", "regions overlay"} & set(jobs)
 

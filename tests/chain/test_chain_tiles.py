@@ -29,7 +29,7 @@ def test_tiled_grids_join_to_the_same_values(full, tiled):
             pattern = f"{stage}/{simulation}/{kind}-*.nc"
             assert len(tiled.files(pattern)) == 6
             assert_same_grids(grids(full.root, pattern), grids(tiled.root, pattern))
-        for crop in ("maize_rainfed", "maize_irrigated", "barley_rainfed", "rice_irrigated"):
+        for crop in ("maize_rainfed", "maize_irrigated", "barley_rainfed"):
             pattern = f"season/{simulation}/{crop}_tile-*.nc"
             assert_same_grids(grids(full.root, pattern), grids(tiled.root, pattern))
 
