@@ -11,7 +11,7 @@ import rasterio
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from prepare_inputs import crop_file, crop_tiff, grid_of
-from stook.assessment.schema import Layer
+from stook.assessment.crops import Layer
 from stook.audit.plain.prepare import (
     PlainGrid,
     PlainPixel,

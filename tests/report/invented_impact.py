@@ -10,7 +10,7 @@ from stook.assessment.schema import Assessment
 from stook.audit.ledger import Job
 from stook.constants import OUTSIDE
 from stook.grids.analysis import analysis_grid
-from stook.trend.impact import COLUMNS
+from stook.trend.impact_table import COLUMNS
 
 
 def add_impact(

@@ -24,8 +24,9 @@ from stook.grids.missing import Reason
 from stook.regions.totals import SystemGrids
 from stook.trend import job
 from stook.trend.detrend import detrend, impact_series, lowest_value
-from stook.trend.impact import COLUMNS, Setting, impact_table, spread, system_impact
+from stook.trend.impact import Setting, system_impact
 from stook.trend.impact_kernels import impact_percent, logarithmic_mean, ratio_trends
+from stook.trend.impact_table import COLUMNS, impact_table, spread
 from stook.trend.series import TrendOptions
 from stook.yields.response import Response
 

@@ -20,8 +20,9 @@ from typing import Any
 import numpy as np
 import xarray as xr
 from stook.regions.totals import SystemGrids
-from stook.trend.impact import Setting, SystemImpact, impact_table, system_impact
+from stook.trend.impact import Setting, SystemImpact, system_impact
 from stook.trend.impact_kernels import ratio_trends
+from stook.trend.impact_table import impact_table
 from stook.trend.kernels import linear_fit
 from stook.trend.series import TrendOptions, series_trends
 from stook.yields.response import Response

@@ -7,8 +7,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from stook.assessment.crops import Layer
 from stook.assessment.inventory import as_problems
-from stook.assessment.schema import Assessment, Layer
+from stook.assessment.schema import Assessment
 from stook.assessment.variables import system_indices
 from stook.errors import Problem, StookError
 from stook.grids.analysis import AnalysisGrid

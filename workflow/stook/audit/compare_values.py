@@ -123,6 +123,7 @@ class _Largest:
     detail: tuple[Any, ...] = ("", np.nan, "", np.nan, np.nan)
 
     def row(self, name: str) -> dict[str, Any]:
+        """Return the row of a file in the table of files."""
         status = "different" if self.differing else "identical"
         counts = (self.compared, self.differing, self.one_missing)
         return dict(zip(FILE_COLUMNS, (name, status, *counts, *self.detail), strict=True))

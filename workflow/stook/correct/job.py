@@ -57,51 +57,53 @@ def tile(assessment: Assessment, simulation: str, tile: str) -> None:
             reference = stack.enter_context(open_result(parents[-1]))
         variables = [str(name) for name in model.data_vars if model[name].dims == _BLOCK_VARIABLE]
         _check_reference(assessment, simulation, model, reference, variables)
-        step = model.attrs["time_step"]
-        setup = make_setup(
-            None if reference is None else series_of(reference["time"], step),
-            series_of(model["time"], step),
-            variables,
-            assessment.correct,
-            assessment.correct.calibration or assessment.periods.baseline,
-            assessment.periods.horizons,
-            simulation,
-            assessment.seed,
-        )
+        setup = _setup(assessment, simulation, model, reference, variables)
         outside = _outside(layout, number, tile_count(assessment))
         found = [
             _lazy_group(group, reference, model, outside, setup, assessment.store.block_mb)
             for group in setup.groups
         ]
         grid = AnalysisGrid.from_dataset(model).coordinates()
-        attributes = {"time_step": step, "simulation": simulation}
+        attributes = {"time_step": model.attrs["time_step"], "simulation": simulation}
         grids, transfer, evaluation = (
             xr.merge(parts, join="exact").assign_coords(grid).assign_attrs(attributes)
             for parts in zip(*found, strict=True)
         )
         grids = grids.assign_coords(time=model["time"])
+        codec = assessment.store.daily_codec
+        of = f"the correction of {simulation}"
+        paths = [
+            path(simulation, number)
+            for path in (layout.corrected, layout.transfer, layout.evaluation)
+        ]
         job.netcdf_files(
             [
-                (
-                    grids,
-                    layout.corrected(simulation, number),
-                    f"Corrected climate of {simulation}",
-                    assessment.store.daily_codec,
-                ),
-                (
-                    transfer,
-                    layout.transfer(simulation, number),
-                    f"Calibration quantiles of the correction of {simulation}",
-                    "zlib",
-                ),
-                (
-                    evaluation,
-                    layout.evaluation(simulation, number),
-                    f"Split-sample evaluation of the correction of {simulation}",
-                    "zlib",
-                ),
+                (grids, paths[0], f"Corrected climate of {simulation}", codec),
+                (transfer, paths[1], f"Calibration quantiles of {of}", "zlib"),
+                (evaluation, paths[2], f"Split-sample evaluation of {of}", "zlib"),
             ]
         )
+
+
+def _setup(
+    assessment: Assessment,
+    simulation: str,
+    model: xr.Dataset,
+    reference: xr.Dataset | None,
+    variables: list[str],
+) -> Setup:
+    """Return what the blocks of a simulation share: windows, choices, seeds."""
+    step = model.attrs["time_step"]
+    return make_setup(
+        None if reference is None else series_of(reference["time"], step),
+        series_of(model["time"], step),
+        variables,
+        assessment.correct,
+        assessment.correct.calibration or assessment.periods.baseline,
+        assessment.periods.horizons,
+        simulation,
+        assessment.seed,
+    )
 
 
 def summary(assessment: Assessment) -> None:

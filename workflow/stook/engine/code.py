@@ -18,10 +18,12 @@ import stook
 PACKAGE = "stook"
 NO_RESULT = frozenset(
     {
+        "stook.assessment.crops",
         "stook.assessment.documents",
         "stook.assessment.layout",
         "stook.assessment.load",
         "stook.assessment.schema",
+        "stook.assessment.sections",
         "stook.audit.ledger",
         "stook.errors",
         "stook.version",
@@ -194,6 +196,7 @@ class _WithoutDocstrings(ast.NodeTransformer):
     """Drop every expression statement that is a plain string."""
 
     def visit_Expr(self, node: ast.Expr) -> ast.AST:
+        """Put nothing in the place of a plain string."""
         text = isinstance(node.value, ast.Constant) and isinstance(node.value.value, str)
         return ast.Pass() if text else node
 

@@ -15,8 +15,9 @@ from typing import Any
 
 from pydantic import BaseModel
 
+from stook.assessment.crops import WaterSystem
 from stook.assessment.load import assessment_digest
-from stook.assessment.schema import Assessment, WaterSystem
+from stook.assessment.schema import Assessment
 from stook.assessment.variables import system_indices
 from stook.engine.code import code_digest
 from stook.yields.co2 import effect_of

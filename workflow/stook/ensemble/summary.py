@@ -185,8 +185,6 @@ def summarise(
         First and last year of each horizon there is.
     """
     values = np.ascontiguousarray(np.moveaxis(series.production, 1, 0))  # region, draw, year
-    count, draws, _ = values.shape
-    flat = values.reshape(count * draws, -1)
     years = series.years
     base = _period_mean(values, years, settings.baseline)
     base = np.where(base > 0, base, np.nan)
@@ -197,52 +195,65 @@ def summarise(
     inside = (years >= settings.baseline[0]) & (years <= settings.baseline[1])
     about = smooth.detrended_deviation(np.ascontiguousarray(values[:, 0]), years, inside)
     own = dict({BASELINE: settings.baseline}, **windows)
+    return RunSummary(
+        simulation=simulation,
+        crop=crop,
+        system=system,
+        regions=series.regions,
+        area=series.area,
+        missing_area=series.missing_area,
+        leads=settings.leads,
+        paths=fitted.at_leads(years, settings.leads, level),
+        internal=fitted.internal(level),
+        noise=fitted.noise * (central * central)[:, None],
+        years=years,
+        signal=signal,
+        deviation=fitted.deviation * central,
+        baseline_deviation=about * central,
+        steps=_step_changes(values, years, base, settings.steps),
+        periods=list(own),
+        windows=own,
+        production=_period_means(values, years, own),
+        extrapolated=_period_means(series.extrapolated[:, None], years, own)[..., 0],
+        **_shortfalls(values, fitted.paths, base, years, own, settings.shortfall / 100),
+    )
+
+
+def _shortfalls(
+    values: np.ndarray,
+    expected: np.ndarray,
+    base: np.ndarray,
+    years: np.ndarray,
+    own: Mapping[str, Years],
+    share: float,
+) -> dict[str, np.ndarray]:
+    """Count the years far below the baseline mean and below the smooth path, by period.
+
+    Takes production and its smooth path (region, draw, year) and its baseline mean (region, draw);
+    returns the attributes `counted`, `short`, `worst` and `flags` of `RunSummary`.
+    """
+    count, draws, _ = values.shape
+    flat = (count * draws, years.size)
     chosen = np.array([(years >= a) & (years <= b) for a, b in own.values()])
     lengths = np.array([b - a + 1 for a, b in own.values()])
-    expected = fitted.paths.reshape(flat.shape)
     counted, short = short_counts(
-        flat, expected, base.ravel(), chosen, lengths, settings.shortfall / 100
+        values.reshape(flat), expected.reshape(flat), base.ravel(), chosen, lengths, share
     )
     counted = counted.reshape(count, draws, -1)[:, 0]
     there = counted >= SHARE_OF_YEARS * lengths - 1e-9
-    lowest = [np.where(mask, values[:, 0], np.nan) for mask in chosen]
-    worst = np.stack([_lowest(one) for one in lowest], axis=1)
-    return RunSummary(
-        simulation,
-        crop,
-        system,
-        series.regions,
-        series.area,
-        series.missing_area,
-        settings.leads,
-        fitted.at_leads(years, settings.leads, level),
-        fitted.internal(level),
-        fitted.noise * (central * central)[:, None],
-        years,
-        signal,
-        fitted.deviation * central,
-        about * central,
-        _step_changes(values, years, base, settings.steps),
-        list(own),
-        np.stack([_period_mean(values, years, period) for period in own.values()], axis=1),
-        np.where(there, counted, 0),
-        np.moveaxis(short.reshape(count, draws, len(own), len(REFERENCES)), 1, 3),
-        np.where(there, worst, np.nan),
-        short_years(
-            np.ascontiguousarray(values[:, 0]),
-            np.ascontiguousarray(fitted.paths[:, 0]),
-            base[:, 0],
-            settings.shortfall / 100,
-        ),
-        own,
-        np.stack(
-            [
-                _period_mean(series.extrapolated[:, None], years, period)[:, 0]
-                for period in own.values()
-            ],
-            axis=1,
-        ),
-    )
+    lowest = [_lowest(np.where(mask, values[:, 0], np.nan)) for mask in chosen]
+    central, path = (np.ascontiguousarray(grid[:, 0]) for grid in (values, expected))
+    return {
+        "counted": np.where(there, counted, 0),
+        "short": np.moveaxis(short.reshape(count, draws, len(own), len(REFERENCES)), 1, 3),
+        "worst": np.where(there, np.stack(lowest, axis=1), np.nan),
+        "flags": short_years(central, path, base[:, 0], share),
+    }
+
+
+def _period_means(values: np.ndarray, years: np.ndarray, own: Mapping[str, Years]) -> np.ndarray:
+    """Return means by period: (region, draw, year) -> (region, period, draw)."""
+    return np.stack([_period_mean(values, years, period) for period in own.values()], axis=1)
 
 
 @dataclass(frozen=True)
@@ -262,6 +273,7 @@ class _Fitted:
 
     @classmethod
     def of(cls, values: np.ndarray, years: np.ndarray, settings: Settings) -> _Fitted:
+        """Fit the paths of all regions and draws; those with the same years known together."""
         count, draws, _ = values.shape
         paths = np.full(values.shape, np.nan)
         variance = np.full((count, draws), np.nan)

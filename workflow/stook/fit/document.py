@@ -11,7 +11,7 @@ from typing import Annotated, Any, Literal
 from pydantic import BeforeValidator, Field, model_validator
 
 from stook.assessment.documents import read_document
-from stook.assessment.schema import Name, Section, Years
+from stook.assessment.sections import Name, Section, Years
 from stook.season.definition import IndexDefinition
 from stook.yields.response import Term
 

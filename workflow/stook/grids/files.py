@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any, Literal
 
@@ -72,6 +72,14 @@ def pixel_chunks(dataset: xr.Dataset, block_mb: float, values_per_pixel: int) ->
     rows = min(dataset.sizes["lat"], max(1, min(PIXEL_CHUNK, pixels // columns)))
     chunks = {str(name): -1 for name in dataset.dims}
     return chunks | {"lat": rows, "lon": columns}
+
+
+def chunked_like(grid: xr.DataArray, layers: Sequence[xr.DataArray]) -> list[xr.DataArray]:
+    """Return layers (lat, lon) in the blocks of a lazy grid; as they are if it is not lazy."""
+    sizes = grid.chunksizes
+    if not sizes:
+        return list(layers)
+    return [one.chunk({d: sizes[d] for d in ("lat", "lon")}) for one in layers]
 
 
 def encoding(dataset: xr.Dataset, codec: Codec = "zlib") -> dict[str, dict[str, Any]]:

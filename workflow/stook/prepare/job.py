@@ -6,8 +6,9 @@ from contextlib import ExitStack
 
 import xarray as xr
 
+from stook.assessment.crops import Layer
 from stook.assessment.layout import Layout
-from stook.assessment.schema import Assessment, Layer
+from stook.assessment.schema import Assessment
 from stook.assessment.simulations import find_simulation
 from stook.assessment.variables import series_variables
 from stook.audit.ledger import Job

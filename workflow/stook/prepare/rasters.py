@@ -11,7 +11,7 @@ import rasterio
 import xarray as xr
 from rasterio.windows import Window
 
-from stook.assessment.schema import Layer
+from stook.assessment.crops import Layer
 from stook.errors import InputError
 from stook.grids.axes import SourceAxis, axis_of_edges, source_axes
 from stook.grids.cf import open_undecoded, read_window

@@ -5,7 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-from stook.assessment.schema import Assessment, Layer
+from stook.assessment.crops import Layer
+from stook.assessment.schema import Assessment
 from stook.assessment.variables import series_variables
 from stook.season.definition import describe, unit_of
 from stook.yields.response import PiecewiseLinear, Response

@@ -9,7 +9,8 @@ import pandas as pd
 from pyogrio.errors import DataLayerError, DataSourceError
 
 from stook.assessment.layout import Layout
-from stook.assessment.schema import Assessment, Years
+from stook.assessment.schema import Assessment
+from stook.assessment.sections import Years
 from stook.assessment.simulations import Simulation, all_simulations
 from stook.assessment.variables import system_response
 from stook.constants import OBSERVED, OUTSIDE

@@ -12,6 +12,7 @@ import xarray as xr
 from stook.assessment.variables import sources
 from stook.errors import InputError
 from stook.grids.calendars import TimeStep
+from stook.grids.files import chunked_like
 from stook.grids.missing import Reason, reason_attributes
 from stook.season.definition import (
     SEASON,
@@ -157,10 +158,8 @@ def season_indices(
     wanted = Wanted.of(definitions, phases, available, step, path)
     time = SeriesTime.of(climate["time"].values, step, path)
     grids = [climate[name] for name in wanted.variables]
-    chunks = {d: c for d, c in zip(grids[0].dims, grids[0].chunks or (), strict=False)}
-    layers = [planting, maturity, reason, _input_reason(climate, wanted.variables, reason)]
-    if chunks:
-        layers = [one.chunk({d: chunks[d] for d in ("lat", "lon")}) for one in layers]
+    lost = _input_reason(climate, wanted.variables, reason)
+    layers = chunked_like(grids[0], [planting, maturity, reason, lost])
     results = xr.apply_ufunc(
         _block,
         *layers,

@@ -11,8 +11,9 @@ from stook.grids.missing import Reason, reason_attributes
 from stook.regions.totals import SystemGrids
 from stook.trend.detrend import impact_series
 from stook.trend.discovery import UNKNOWN, rate_for_level, significant_in_families
-from stook.trend.impact import JointYears, Setting, blocks, spread
+from stook.trend.impact import JointYears, Setting, blocks
 from stook.trend.impact_kernels import impact_percent, ratio_trends
+from stook.trend.impact_table import spread
 from stook.trend.periods import is_covered
 from stook.trend.pixels import TEST_WORDS, Domain
 from stook.trend.series import TrendOptions, series_trends

@@ -19,9 +19,10 @@ from stook.regions.totals import SystemGrids
 from stook.season.definition import describe, unit_of
 from stook.trend.distribution import COLUMNS as DISTRIBUTION_COLUMNS
 from stook.trend.field import COLUMNS as FIELD_COLUMNS
-from stook.trend.impact import COLUMNS as IMPACT_COLUMNS
-from stook.trend.impact import Setting, impact_table, system_impact
+from stook.trend.impact import Setting, system_impact
 from stook.trend.impact_pixels import impact_maps
+from stook.trend.impact_table import COLUMNS as IMPACT_COLUMNS
+from stook.trend.impact_table import impact_table
 from stook.trend.periods import is_covered, trend_periods
 from stook.trend.pixels import Domain, Quantity, join_tables, map_trends
 from stook.trend.regions import COLUMNS, regional_trends, regional_yields

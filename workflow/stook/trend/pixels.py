@@ -153,6 +153,7 @@ class _Period:
     def of(
         cls, years: np.ndarray, ends: tuple[int, int], domain: Domain, options: TrendOptions
     ) -> _Period:
+        """Return an empty collection of the years between two ends, both included."""
         inside = (years >= ends[0]) & (years <= ends[1])
         sums = Field(domain.names, years[inside], options.count)
         return cls(inside, Histogram(), Histogram(), sums)
@@ -160,15 +161,18 @@ class _Period:
     def collect(
         self, values: np.ndarray, random: RandomTrends, areas: np.ndarray, region: np.ndarray
     ) -> None:
+        """Add the trends of some pixels."""
         slopes = random.slopes * YEARS_PER_DECADE
         self.observed.add(slopes[:1], areas)
         self.random.add(slopes[1:], areas)
         self.sums.add(values, random, areas, region)
 
     def distribution(self, quantity: str, period: str) -> pd.DataFrame:
+        """Return the distribution of the pixels' trends and of the randomised ones."""
         return distribution_table(quantity, period, self.observed, self.random)
 
     def field_table(self, quantity: str, period: str, options: TrendOptions) -> pd.DataFrame:
+        """Return the significance of the field by region."""
         return self.sums.table(quantity, period, AREA_UNIT_HA, YEARS_PER_DECADE, options)
 
 
@@ -199,10 +203,12 @@ class _Grids:
 
     @classmethod
     def empty(cls, shape: tuple[int, ...], tests: tuple[str, ...]) -> _Grids:
+        """Return arrays without a value."""
         names = ("slope", "theil_sen", "lag1", *(f"p_{test}" for test in tests))
         return cls(np.zeros(shape, np.int16), {name: np.full(shape, np.nan) for name in names})
 
     def store(self, k: int, rows: np.ndarray, columns: np.ndarray, trends: SeriesTrends) -> None:
+        """Put the trends of some pixels in period `k`."""
         self.years[k, rows, columns] = trends.years
         found = {
             "slope": YEARS_PER_DECADE * trends.slope,

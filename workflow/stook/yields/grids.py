@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 import xarray as xr
 
+from stook.grids.files import chunked_like
 from stook.grids.missing import Reason, reason_attributes
 from stook.season.definition import YEAR_ATTRIBUTES
 from stook.yields.kernels import TERMS_AT_ONCE, padded, term_effects, yield_ratios
@@ -72,10 +73,7 @@ def yield_grids(
     model = _Model(response, np.asarray(coefficients, dtype=np.float64), inside, fewest)
     names = response.used_indices
     grids = [indices[name] for name in names]
-    layers = [baseline_yield, reason, indices["reason"]]
-    if grids[0].chunks:
-        sizes = dict(zip(grids[0].dims, grids[0].chunks, strict=True))
-        layers = [one.chunk({d: sizes[d] for d in ("lat", "lon")}) for one in layers]
+    layers = chunked_like(grids[0], [baseline_yield, reason, indices["reason"]])
     effects = len(response.terms)
     results = xr.apply_ufunc(
         _block,
@@ -95,14 +93,22 @@ def yield_grids(
     }
     data["reason"] = results[-1].assign_attrs(reason_attributes())
     if technology is not None:
-        factor = xr.DataArray(technology.loc[years].to_numpy(), dims="year")
-        data["yield"] = (data["yield"] * factor).assign_attrs(attributes["yield"])
-        data["yield"].attrs["comment"] = (
-            "baseline yield times yield_ratio times technology; harvested area as in the baseline"
-        )
-        data[TECHNOLOGY] = factor.assign_attrs(long_name="technology factor", units="1")
+        data |= _with_technology(data["yield"], technology.loc[years])
     dataset = xr.Dataset(data).drop_vars("crop_system", errors="ignore")
     return dataset.assign_coords(year=("year", years, YEAR_ATTRIBUTES))
+
+
+def _with_technology(yields: xr.DataArray, technology: pd.Series) -> dict[str, xr.DataArray]:
+    """Return the yield under a technology path, and the path (year)."""
+    factor = xr.DataArray(technology.to_numpy(), dims="year")
+    scaled = (yields * factor).assign_attrs(yields.attrs)
+    scaled.attrs["comment"] = (
+        "baseline yield times yield_ratio times technology; harvested area as in the baseline"
+    )
+    return {
+        "yield": scaled,
+        TECHNOLOGY: factor.assign_attrs(long_name="technology factor", units="1"),
+    }
 
 
 def _block(*arrays: np.ndarray, model: _Model) -> tuple[np.ndarray, ...]:
