@@ -83,19 +83,30 @@ def _closure(root: Path, start: Symbol) -> list[tuple[str, str, str]]:
         if (module, symbol) in seen or module in NO_RESULT:
             continue
         seen.add((module, symbol))
-        content = _read(root, module)
-        if content is None:
-            continue
-        nodes = _nodes(content, symbol)
-        pending += [(module, "")] if symbol else []
-        for node in nodes:
-            texts.append((module, symbol, _text(node)))
-            pending += _uses(root, module, content, node)
-        if symbol in content.imports and not nodes:
-            pending.append(content.imports[symbol])
-        if not symbol:
-            texts += _data_files(root, module)
+        own, used = _definition(root, module, symbol)
+        texts += own
+        pending += used
     return texts
+
+
+@functools.cache
+def _definition(
+    root: Path, module: str, symbol: str
+) -> tuple[list[tuple[str, str, str]], list[Symbol]]:
+    """Return the texts of one name, and the symbols it uses; many jobs share most of them."""
+    content = _read(root, module)
+    if content is None:
+        return [], []
+    nodes = _nodes(content, symbol)
+    texts = [(module, symbol, _text(node)) for node in nodes]
+    used = [(module, "")] if symbol else []
+    for node in nodes:
+        used += _uses(root, module, content, node)
+    if symbol in content.imports and not nodes:
+        used.append(content.imports[symbol])
+    if not symbol:
+        texts += _data_files(root, module)
+    return texts, used
 
 
 def _nodes(content: _Module, symbol: str) -> list[ast.AST]:

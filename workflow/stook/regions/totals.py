@@ -208,18 +208,23 @@ def totals_table(
         for other in others:
             first = first + other
         parts[COMBINED] = first
-    draws = len(next(iter(parts.values())).production)
-    frames = [
-        _rows(totals, draw, system) for draw in range(draws) for system, totals in parts.items()
-    ]
-    table = pd.concat(frames, ignore_index=True)[COLUMNS]
+    production = np.concatenate(
+        [totals.production.reshape(len(totals.production), -1) for totals in parts.values()], axis=1
+    )
+    draws, size = production.shape
+    cells = pd.concat([_cells(totals, system) for system, totals in parts.items()])
+    table = cells.take(np.tile(np.arange(size), draws)).reset_index(drop=True)
+    table["draw"] = np.repeat(np.arange(draws, dtype=np.int64), size)
+    table["production_t"] = production.ravel()
+    table = table[COLUMNS]
     if technology is not None:
         table[TECHNOLOGY] = technology.loc[table["year"]].to_numpy()
         table["production_t"] *= table[TECHNOLOGY]
     return table
 
 
-def _rows(totals: Totals, draw: int, system: str) -> pd.DataFrame:
+def _cells(totals: Totals, system: str) -> pd.DataFrame:
+    """Return what is the same for every draw, a row for each region and year."""
     regions, years = totals.flagged_area.shape
     area = np.repeat(totals.area, years)
     known = np.isfinite(totals.production[CENTRAL_DRAW].ravel()) & (area > 0)
@@ -230,8 +235,6 @@ def _rows(totals: Totals, draw: int, system: str) -> pd.DataFrame:
             "region": pd.Series(np.repeat(totals.regions, years), dtype="str"),
             "system": pd.Series([system], dtype="str").repeat(regions * years).to_numpy(),
             "year": np.tile(totals.years.astype(np.int64), regions),
-            "draw": np.int64(draw),
-            "production_t": totals.production[draw].ravel(),
             "area_ha": area,
             "extrapolated_share": np.minimum(share, 1.0),
             "missing_area_ha": np.repeat(totals.missing_area, years),

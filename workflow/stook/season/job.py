@@ -27,7 +27,7 @@ def tile(assessment: Assessment, simulation: str, crop: str, system: str, tile: 
     ):
         series = sum(variable.dims[:1] == ("time",) for variable in lazy.data_vars.values())
         chunks = pixel_chunks(lazy, assessment.store.block_mb, series * lazy.sizes["time"])
-        climate = lazy.chunk(chunks)
+        climate = lazy.chunk(chunks, token=str(source))  # else the times are hashed for names
         here = layers.sel(crop_system=f"{crop}_{system}", lat=lazy["lat"], lon=lazy["lon"]).load()
         indices = season_indices(
             climate,

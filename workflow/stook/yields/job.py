@@ -71,12 +71,15 @@ def grid(assessment: Assessment, simulation: str, crop: str, system: str) -> Non
         parts = [stack.enter_context(open_result(path)) for path in tiles]
         size = _COPIES * parts[0].sizes["year"] * len(response.coefficient_names)
         block = assessment.store.block_mb
-        parts = [part.chunk(pixel_chunks(part, block, size)) for part in parts]
+        parts = [
+            part.chunk(pixel_chunks(part, block, size), token=str(path))
+            for path, part in zip(tiles, parts, strict=True)
+        ]
         season = (
             xr.concat(parts, "lat", data_vars="minimal", join="exact") if parts[1:] else parts[0]
         )
         season = season_with_co2(assessment, simulation, crop, season)
-        here = layers.sel(crop_system=f"{crop}_{system}")
+        here = layers.sel(crop_system=f"{crop}_{system}").load()
         grids = yield_grids(
             season,
             here["baseline_yield"],
